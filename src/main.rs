@@ -1,0 +1,2 @@
+//! The door of the house.
+fn main() {}
