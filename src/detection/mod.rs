@@ -7,8 +7,10 @@
 //! their bins sum to the mean of `|x|^2`; bins run from the lowest frequency to the highest, DC at
 //! index `N/2`; frequencies in a plan are radio frequencies, offsets from the centre are named so.
 
+pub mod availability;
 pub mod block;
 pub mod plan;
+pub mod standing;
 pub mod time;
 pub mod verdict;
 pub mod window;
