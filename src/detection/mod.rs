@@ -11,6 +11,7 @@ pub mod availability;
 pub mod block;
 pub mod plan;
 pub mod standing;
+pub mod statistics;
 pub mod time;
 pub mod verdict;
 pub mod window;
