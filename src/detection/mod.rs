@@ -9,9 +9,16 @@
 
 pub mod availability;
 pub mod block;
+pub mod decision;
+pub mod detector;
+pub mod floor;
+pub mod layout;
 pub mod plan;
+pub mod segment;
+pub mod spectrum;
 pub mod standing;
 pub mod statistics;
 pub mod time;
+pub mod timing;
 pub mod verdict;
 pub mod window;

@@ -1,0 +1,176 @@
+//! From the energies of one dwell to a verdict per channel.
+
+use std::collections::HashMap;
+use std::sync::Arc;
+
+use super::floor::{FloorAt, FloorFit, FloorModel};
+use super::layout::{ChannelSpan, Layout};
+use super::plan::Plan;
+use super::statistics::ratio::RatioTable;
+use super::statistics::welch::PowerCorrelation;
+use super::verdict::{Levels, Reason, Reasons, State, Verdict};
+
+/// What makes a whole dwell unfit for some or all claims.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub struct Integrity {
+    /// Reasons that turn every verdict of the dwell into `unknown`.
+    pub reasons: Reasons,
+}
+
+/// Everything about a decision that does not depend on the samples: the floor model and, per channel,
+/// thresholds and sensitivities. Made once for each number of transforms that a dwell can have.
+#[derive(Clone, Debug)]
+pub struct Decision {
+    model: FloorModel,
+    tables: Vec<Arc<RatioTable>>,
+    protection_levels_db: Vec<f64>,
+    looks: Vec<f64>,
+    reference_looks: f64,
+}
+
+impl Decision {
+    /// For dwells of `transforms` transforms.
+    pub fn new(
+        plan: &Plan,
+        layout: &Layout,
+        correlation: &PowerCorrelation,
+        transforms: usize,
+    ) -> Decision {
+        let looks_of = |weights: &[f64]| correlation.equivalent_looks(transforms, weights);
+        let cell_looks: Vec<f64> =
+            layout.references.iter().map(|cell| looks_of(&cell.span.weights)).collect();
+        let looks: Vec<f64> =
+            layout.channels.iter().map(|channel| looks_of(&channel.span.weights)).collect();
+        let mut shared: HashMap<(i64, usize), Arc<RatioTable>> = HashMap::new();
+        let tables = layout
+            .channels
+            .iter()
+            .zip(&looks)
+            .map(|(channel, &looks)| {
+                let band_index = plan.channels[channel.channel_index].band_index;
+                let band = &plan.bands[band_index];
+                // Channels whose looks differ by under 0.05 % share a table: that moves a false-alarm
+                // probability of 1e-9 by 1 %.
+                let key = ((looks.ln() * 2000.0).round() as i64, band_index);
+                let make = || Arc::new(RatioTable::new(looks, band.pfa, band.pd));
+                shared.entry(key).or_insert_with(make).clone()
+            })
+            .collect();
+        let protection_levels_db = layout
+            .channels
+            .iter()
+            .map(|channel| plan.band_of(&plan.channels[channel.channel_index]).protection_level_db)
+            .collect();
+        Decision {
+            model: FloorModel::new(&plan.floor, &layout.references, &cell_looks),
+            tables,
+            protection_levels_db,
+            looks,
+            reference_looks: cell_looks.iter().sum(),
+        }
+    }
+
+    /// Equivalent looks of a channel, by its place in the layout.
+    pub fn looks(&self, channel: usize) -> f64 {
+        self.looks[channel]
+    }
+
+    /// Looks of all reference cells together: the most that a floor estimate can rest on.
+    pub fn reference_looks(&self) -> f64 {
+        self.reference_looks
+    }
+
+    /// Threshold (ratio to the floor) and required SNR (linear) of a channel, by its place in the
+    /// layout, for a floor of the given looks.
+    pub fn threshold(&self, channel: usize, floor_looks: f64) -> (f64, f64) {
+        self.tables[channel].at(floor_looks)
+    }
+
+    /// The verdicts of one dwell, appended to `verdicts`.
+    ///
+    /// `spectrum` is the dwell's averaged power per bin by rising frequency; `energies` and `fit` are
+    /// scratch, reused from dwell to dwell.
+    pub fn decide(
+        &self,
+        layout: &Layout,
+        spectrum: &[f32],
+        integrity: Integrity,
+        scratch: &mut Scratch,
+        verdicts: &mut Vec<Verdict>,
+    ) {
+        let energies = &mut scratch.energies;
+        energies.clear();
+        energies.extend(layout.references.iter().map(|cell| cell.span.mean_power(spectrum)));
+        let mut reasons = integrity.reasons;
+        if energies.iter().any(|energy| !energy.is_finite()) {
+            reasons.insert(Reason::NotFinite);
+        } else if energies.iter().any(|energy| *energy <= 0.0) {
+            reasons.insert(Reason::NoNoise);
+        }
+        let measurable = !reasons.contains(Reason::NotFinite) && !reasons.contains(Reason::NoNoise);
+        let fitted = measurable && self.model.fit(energies, &mut scratch.fit);
+        if measurable && !fitted {
+            reasons.insert(Reason::NoReference);
+        }
+        for (index, channel) in layout.channels.iter().enumerate() {
+            let floor = if fitted {
+                self.model.at(&scratch.fit, channel.position, channel.own_reference)
+            } else {
+                None
+            };
+            let mut reasons = reasons;
+            if fitted && floor.is_none() {
+                reasons.insert(Reason::NoReference);
+            }
+            let power = energies[channel.own_reference];
+            verdicts.push(self.verdict(index, channel, power, floor, reasons));
+        }
+    }
+
+    /// One channel's verdict; `reasons` are those that stand against any claim.
+    fn verdict(
+        &self,
+        index: usize,
+        channel: &ChannelSpan,
+        power: f64,
+        floor: Option<FloorAt>,
+        mut reasons: Reasons,
+    ) -> Verdict {
+        let channel_index = channel.channel_index;
+        let Some(floor) = floor else {
+            assert!(!reasons.is_empty(), "no floor has a reason");
+            return Verdict { channel_index, state: State::Unknown, reasons, levels: None };
+        };
+        let (threshold, snr) = self.tables[index].at(floor.looks);
+        let floor_db = decibels(floor.mean * channel.bandwidth_bins);
+        let levels = Levels {
+            power_db: decibels(power * channel.bandwidth_bins),
+            floor_db,
+            threshold_db: floor_db + decibels(threshold),
+            sensitivity_db: floor_db + decibels(snr),
+        };
+        let state = if !reasons.is_empty() {
+            State::Unknown
+        } else if power > threshold * floor.mean {
+            State::Occupied
+        } else if levels.sensitivity_db > self.protection_levels_db[index] {
+            reasons.insert(Reason::Insensitive);
+            State::Unknown
+        } else {
+            State::Idle
+        };
+        Verdict { channel_index, state, reasons, levels: Some(levels) }
+    }
+}
+
+/// Buffers of [`Decision::decide`], kept from dwell to dwell.
+#[derive(Clone, Debug, Default)]
+pub struct Scratch {
+    energies: Vec<f64>,
+    fit: FloorFit,
+}
+
+/// A power ratio in decibels.
+fn decibels(ratio: f64) -> f64 {
+    10.0 * ratio.log10()
+}
