@@ -36,7 +36,7 @@ pub(super) fn of_band(
     names: &mut Names,
 ) -> Result<(Option<AskedRaster>, Vec<AskedChannel>), ConfigError> {
     if band.raster.is_none() && band.channels.is_empty() {
-        return Err(at.error("missing: channels ([bands.raster] or [[bands.channels]])"));
+        return Err(at.error("missing: give channels ([bands.raster] or [[bands.channels]])"));
     }
     let mut channels = Vec::new();
     let mut asked_raster = None;

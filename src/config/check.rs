@@ -172,7 +172,7 @@ fn floor(floor: &file::Floor, at: &Place) -> Result<FloorSettings, ConfigError> 
 
 fn bands(bands: &[file::Band], at: &Place) -> Result<Vec<AskedBand>, ConfigError> {
     if bands.is_empty() {
-        return Err(at.error("missing: at least one [[bands]] table"));
+        return Err(at.error("missing: give at least one [[bands]] table"));
     }
     let mut names = channels::Names::default();
     let checked = bands.iter().enumerate().map(|(index, raw)| {
@@ -195,7 +195,7 @@ fn band(band: &file::Band, at: &Place) -> Result<Band, ConfigError> {
     let dwell_s = duration("dwell", &band.dwell, 1e-3..=60.0, DEFAULT_DWELL_S)?;
     let slice_default_s = DEFAULT_SLICE_S.min(dwell_s);
     let max_age_default_s = DEFAULT_MAX_AGE_S.max(DEFAULT_MAX_AGE_DWELLS * dwell_s);
-    let max_age_s = duration("max_age", &band.max_age, 0.0..=3600.0, max_age_default_s)?;
+    let max_age_s = duration("max_age", &band.max_age, dwell_s..=3600.0, max_age_default_s)?;
     if let (Some(given), true) = (&band.max_age, max_age_s <= dwell_s) {
         return Err(at.at("max_age").error(format_args!(
             "{given} is out of range (longer than the dwell, {}, up to 1 h)",

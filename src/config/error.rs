@@ -142,7 +142,7 @@ impl<'a> Place<'a> {
 
     /// The value, or the error that it is missing.
     pub(super) fn required<T>(&self, value: Option<T>, wanted: &str) -> Result<T, ConfigError> {
-        value.ok_or_else(|| self.error(format_args!("missing: {wanted}")))
+        value.ok_or_else(|| self.error(format_args!("missing: give {wanted}")))
     }
 
     /// A quantity in a range, both ends allowed; `None` where the key is absent.

@@ -11,7 +11,7 @@ use serde::de::{Deserializer, Error, Visitor};
 
 /// The whole file.
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct File {
     /// Which node this is (table, one, required).
     pub(super) node: Node,
@@ -31,7 +31,7 @@ pub(super) struct File {
 
 /// `[node]`
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Node {
     /// The site, as people call it (text, 1 to 80 characters, required).
     pub(super) site: Option<String>,
@@ -44,7 +44,7 @@ pub(super) struct Node {
 
 /// `[receiver]`
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Receiver {
     /// What kind of source gives the samples (word, `"scene"` or `"recording"`, required for a run;
     /// a replay names its recording itself).
@@ -70,7 +70,7 @@ pub(super) struct Receiver {
 
 /// `[spectrum]`
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Spectrum {
     /// Taper applied to each transform (word, `"hann"` or `"blackman_harris"`, default
     /// `"blackman_harris"`).
@@ -85,7 +85,7 @@ pub(super) struct Spectrum {
 
 /// `[floor]`
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Floor {
     /// Which estimator (word, `"excision"` or `"cell_averaging"`, default `"excision"`).
     pub(super) estimator: Option<String>,
@@ -99,7 +99,7 @@ pub(super) struct Floor {
 
 /// `[[bands]]`
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Band {
     /// Name of the band (1 to 40 letters, digits, `-`, `_` and `.`, a letter or digit first,
     /// required).
@@ -134,7 +134,7 @@ pub(super) struct Band {
 
 /// `[bands.raster]`
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Raster {
     /// Centre of the lowest channel (frequency, -300 GHz to 300 GHz, required). Negative only where
     /// the centre of the block is not known and 0 Hz stands for it.
@@ -158,7 +158,7 @@ pub(super) struct Raster {
 
 /// `[[bands.channels]]`
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Channel {
     /// Name of the channel (1 to 40 letters, digits, `-`, `_` and `.`, a letter or digit first,
     /// required).
@@ -174,7 +174,7 @@ pub(super) struct Channel {
 
 /// `[history]`
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct History {
     /// How often history is committed; a power cut loses at most this much (duration, 1 s to 10 min,
     /// default `"10s"`).
@@ -183,7 +183,7 @@ pub(super) struct History {
 
 /// `[api]`
 #[derive(Clone, Debug, Default, Deserialize)]
-#[serde(deny_unknown_fields, default)]
+#[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Api {
     /// Where answers are served (address and port, loopback only, default `"127.0.0.1:8470"`).
     pub(super) listen: Option<String>,

@@ -4,7 +4,7 @@
 //! it is.
 
 use super::error::{ConfigError, Place};
-use super::quantity::{Quantity, format_duration, format_frequency};
+use super::quantity::{Quantity, format_duration, format_frequency, format_sample_rate};
 use super::{AskedBand, AskedChannel, AskedRaster, Configuration};
 use crate::detection::plan::{Channel, LevelRef, Plan, Receiver, SpectrumSettings};
 
@@ -67,7 +67,7 @@ pub(super) fn plan(
 }
 
 /// Samples from the start of one transform to the start of the next, at least 1.
-pub(super) fn hop_samples(spectrum: &SpectrumSettings) -> f64 {
+fn hop_samples(spectrum: &SpectrumSettings) -> f64 {
     (spectrum.transform_length as f64 * (1.0 - spectrum.overlap)).round().max(1.0)
 }
 
@@ -98,7 +98,7 @@ fn receiver(
         return Err(at("usable_bandwidth").error(format_args!(
             "{} is more than the sample rate ({})",
             format_frequency(usable_bandwidth_hz),
-            format_frequency(sample_rate_hz)
+            format_sample_rate(sample_rate_hz)
         )));
     }
     if given.dc_guard_hz >= usable_bandwidth_hz {
@@ -127,9 +127,9 @@ fn agreed(
                 quantity.format(stated)
             )))
         }
-        (asked, stated) => {
-            place.required(stated.or(asked), "the source does not state it, so the file must")
-        }
+        (asked, stated) => stated
+            .or(asked)
+            .ok_or_else(|| place.error("missing: the source does not state it, so the file must")),
     }
 }
 
@@ -161,8 +161,7 @@ fn raster_fits(raster: &AskedRaster, receiver: &Receiver, at: &Place) -> Result<
     let fitting = (room_hz / raster.spacing_hz + 1.0).floor().max(0.0);
     if fitting < raster.count as f64 {
         return Err(at.at("count").error(format_args!(
-            "{} channels do not fit: from {} on, {fitting} lie inside the usable bandwidth \
-             ({usable})",
+            "{} channels do not fit: from {} on, the usable bandwidth ({usable}) holds {fitting}",
             raster.count,
             format_frequency(first_hz)
         )));

@@ -1,7 +1,7 @@
 //! What is legal but most likely not meant. Each warning is one line: what, with which numbers, and
 //! what would mend it. Nothing is refused here.
 
-use super::plan::{bin_width_hz, hop_samples};
+use super::plan::bin_width_hz;
 use super::quantity::{format_duration, format_frequency, format_share};
 use crate::detection::plan::{Band, Plan};
 use crate::detection::time::NANOS_PER_SECOND;
@@ -42,7 +42,7 @@ pub(super) fn warnings(plan: &Plan) -> Vec<String> {
             |(key, text): (&str, String)| format!("bands[{index}].{key} ({}): {text}", band.id);
         found.extend(rarely_on_offer(band).map(say));
         found.extend(answers_lapse(band).map(say));
-        found.extend(slices_share_samples(plan, band).map(say));
+        found.extend(slices_are_blurred(plan, band).map(say));
         found.extend(channel_warnings(plan, index).into_iter().map(say));
     }
     found
@@ -101,17 +101,17 @@ fn answers_lapse(band: &Band) -> Option<Warning> {
     })
 }
 
-fn slices_share_samples(plan: &Plan, band: &Band) -> Option<Warning> {
-    let transform_s = plan.spectrum.transform_length as f64 / plan.receiver.sample_rate_hz;
-    (band.slice_s < transform_s * (1.0 - 1e-9)).then(|| {
+/// A taper gives weight to about half of its transform: nothing finer in time is told apart.
+fn slices_are_blurred(plan: &Plan, band: &Band) -> Option<Warning> {
+    let half_s = plan.spectrum.transform_length as f64 / plan.receiver.sample_rate_hz / 2.0;
+    (band.slice_s < half_s * (1.0 - 1e-9)).then(|| {
         (
             "slice",
             format!(
-                "{} is shorter than one transform ({}, in steps of {}): neighbouring slices share \
-                 most of their samples",
+                "{} is shorter than half a transform ({}), which blurs neighbouring slices: a longer \
+                 slice or a smaller spectrum.transform_length would tell them apart",
                 format_duration(band.slice_s),
-                format_duration(transform_s),
-                format_duration(hop_samples(&plan.spectrum) / plan.receiver.sample_rate_hz)
+                format_duration(half_s)
             ),
         )
     })
