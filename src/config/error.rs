@@ -1,4 +1,5 @@
-//! What can be wrong with a configuration, always told in one line: file, key, value, what is allowed.
+//! What can be wrong with a configuration, always told in one line: file, key, value, what is
+//! allowed.
 //!
 //! A [`Place`] is a key in the file; it reads the value there or makes the error that names it.
 
@@ -56,9 +57,13 @@ impl ConfigError {
     /// The error for text that is no TOML, or TOML of another shape than the file's.
     pub(super) fn from_toml(file: &str, text: &str, error: &toml::de::Error) -> ConfigError {
         let span = error.span().unwrap_or(0..0);
-        let before = &text[..text.floor_char_boundary(span.start)];
-        let line = before.matches('\n').count() + 1;
-        let column = before.chars().rev().take_while(|c| *c != '\n').count() + 1;
+        let before: Vec<char> = text
+            .char_indices()
+            .take_while(|(index, _)| *index < span.start)
+            .map(|(_, c)| c)
+            .collect();
+        let line = before.iter().filter(|c| **c == '\n').count() + 1;
+        let column = before.iter().rev().take_while(|c| **c != '\n').count() + 1;
         // A file that is TOML has a key at the place of the error; one that is not has none.
         let key = DeTable::parse(text).ok().and_then(|table| key_at(table.get_ref(), &span));
         let position = format!("line {line}, column {column}");
@@ -72,7 +77,7 @@ impl ConfigError {
             .replace("unknown field", "unknown key")
             .replace("invalid type: map", "invalid type: table")
             .replace("expected a sequence", "expected a list")
-            .replace('\n', " ");
+            .replace(char::is_control, " ");
         ConfigError::Invalid { file: file.to_owned(), place, message }
     }
 }
@@ -82,13 +87,14 @@ fn key_at(table: &DeTable<'_>, span: &Range<usize>) -> Option<String> {
     let covers = |outer: Range<usize>| outer.start <= span.start && span.end <= outer.end;
     // Tables first: the span of a table is its header only, so its inside is always searched.
     let inside = table.iter().find_map(|(name, value)| {
-        key_inside(value.get_ref(), span).map(|rest| format!("{}{rest}", name.get_ref()))
+        key_inside(value.get_ref(), span)
+            .map(|rest| format!("{}{rest}", name.get_ref().escape_debug()))
     });
     inside.or_else(|| {
         table
             .iter()
             .find(|(name, value)| covers(name.span()) || covers(value.span()))
-            .map(|(name, _)| name.get_ref().to_string())
+            .map(|(name, _)| name.get_ref().escape_debug().to_string())
     })
 }
 

@@ -1,8 +1,8 @@
 //! The configuration file as it is written: one struct per table, nothing checked but the keys.
 //!
 //! Everything is optional here, so that what is missing is reported by the same checks, in the same
-//! words, as what is wrong. Nothing outside this room ever sees these types. Each key's comment ends
-//! with its unit or form, its range and its default.
+//! words, as what is wrong. Nothing outside this room ever sees these types. Each key's comment
+//! ends with its unit or form, its range and its default.
 
 use std::fmt;
 
@@ -51,8 +51,8 @@ pub(super) struct Receiver {
     pub(super) source: Option<String>,
     /// Which invented scene, with source `"scene"` (word, `"lower_saltmarsh"`, required with it).
     pub(super) scene: Option<String>,
-    /// Which SigMF recording, with source `"recording"` (path of its `.sigmf-meta` file, relative to
-    /// the folder of this file, required with it).
+    /// Which SigMF recording, with source `"recording"` (path of its `.sigmf-meta` file, relative
+    /// to the folder of this file, required with it).
     pub(super) recording: Option<String>,
     /// Radio frequency of the middle of the block; where the source states its own, the two must
     /// agree (frequency, 0 Hz to 300 GHz, default what the source states).
@@ -60,11 +60,11 @@ pub(super) struct Receiver {
     /// Complex samples a second; where the source states its own, the two must agree (sample rate,
     /// 100 S/s to 1000 MS/s, default what the source states).
     pub(super) sample_rate: Option<RawValue>,
-    /// Width around the centre in which the front end is trusted (frequency, 1 Hz to the sample rate,
-    /// default 90 % of the sample rate).
+    /// Width around the centre in which the front end is trusted (frequency, 1 Hz to the sample
+    /// rate, default 90 % of the sample rate).
     pub(super) usable_bandwidth: Option<RawValue>,
-    /// Width around the centre that is left out of every channel and every reference cell (frequency,
-    /// 0 Hz to less than the usable bandwidth, default `"0Hz"`).
+    /// Width around the centre that is left out of every channel and every reference cell
+    /// (frequency, 0 Hz to less than the usable bandwidth, default `"0Hz"`).
     pub(super) dc_guard: Option<RawValue>,
 }
 
@@ -78,8 +78,8 @@ pub(super) struct Spectrum {
     /// Overlap of consecutive transforms (share, 0 % to 90 %, default 75 % for `"blackman_harris"`
     /// and 50 % for `"hann"`).
     pub(super) overlap: Option<RawValue>,
-    /// Length of a transform (samples, a power of two from 16 to 1048576, default the smallest, from
-    /// 256 on, that puts 12 bins in the narrowest channel).
+    /// Length of a transform (samples, a power of two from 16 to 1048576, default the smallest,
+    /// from 256 on, that puts 12 bins in the narrowest channel).
     pub(super) transform_length: Option<RawValue>,
 }
 
@@ -114,8 +114,8 @@ pub(super) struct Band {
     pub(super) protection_level: Option<RawValue>,
     /// Length of a dwell, the unit of decision (duration, 1 ms to 60 s, default `"200ms"`).
     pub(super) dwell: Option<RawValue>,
-    /// Length of a slice, the finest time step of a channel's energy (duration, 100 us to the dwell,
-    /// default `"10ms"`, or the dwell where that is shorter).
+    /// Length of a slice, the finest time step of a channel's energy (duration, 100 us to the
+    /// dwell, default `"10ms"`, or the dwell where that is shorter).
     pub(super) slice: Option<RawValue>,
     /// Time for which a channel must have been idle before first use (duration, 0 s to 1 h, default
     /// `"2s"`).
@@ -151,8 +151,8 @@ pub(super) struct Raster {
     /// Number of the lowest channel; numbers are padded with zeros to the width of the last (whole
     /// number, 0 to 1000000, default `1`).
     pub(super) first_number: Option<RawValue>,
-    /// Names of the protected channels: watched, never on offer (list, names in this raster, default
-    /// `[]`).
+    /// Names of the protected channels: watched, never on offer (list, names in this raster,
+    /// default `[]`).
     pub(super) protected: Vec<String>,
 }
 
@@ -176,8 +176,8 @@ pub(super) struct Channel {
 #[derive(Clone, Debug, Default, Deserialize)]
 #[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct History {
-    /// How often history is committed; a power cut loses at most this much (duration, 1 s to 10 min,
-    /// default `"10s"`).
+    /// How often history is committed; a power cut loses at most this much (duration, 1 s to 10
+    /// min, default `"10s"`).
     pub(super) commit_interval: Option<RawValue>,
 }
 
@@ -189,7 +189,8 @@ pub(super) struct Api {
     pub(super) listen: Option<String>,
 }
 
-/// A number or text whose meaning is checked later, so that the error can name the key and the range.
+/// A number or text whose meaning is checked later, so that the error can name the key and the
+/// range.
 #[derive(Clone, Debug, PartialEq)]
 pub(super) struct RawValue {
     /// The text, or the number written out.

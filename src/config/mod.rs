@@ -1,9 +1,10 @@
-//! The configuration: a TOML file becomes checked plain values, or one line that says what is wrong.
+//! The configuration: a TOML file becomes checked plain values, or one line that says what is
+//! wrong.
 //!
 //! Two steps. [`Configuration::parse`] checks what the file alone can tell; [`Configuration::plan`]
-//! puts in what the source really delivers and checks everything that depends on that block. Nothing
-//! behind this room sees the file or a default: a value in a [`Plan`] is a decided one. Reading the
-//! file is the only thing that this room does to the world.
+//! puts in what the source really delivers and checks everything that depends on that block.
+//! Nothing behind this room sees the file or a default: a value in a [`Plan`] is a decided one.
+//! Reading the file is the only thing that this room does to the world.
 
 mod channels;
 mod check;
@@ -150,8 +151,8 @@ impl Configuration {
     ///
     /// # Errors
     /// [`ConfigError`] when neither states one of them or both do and differ, when a channel, a
-    /// raster or the DC guard does not fit the block, when channels overlap, and when transforms are
-    /// too coarse for a channel or too long for a dwell or a slice.
+    /// raster or the DC guard does not fit the block, when channels overlap, and when transforms
+    /// are too coarse for a channel or too long for a dwell or a slice.
     pub fn plan(
         &self,
         centre_hz: Option<f64>,

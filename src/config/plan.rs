@@ -14,7 +14,8 @@ const EDGE_TOLERANCE_HZ: f64 = 1e-3;
 /// The file and the source may differ by this much [Hz]: a centre or a rate is often rounded to
 /// whole hertz on its way into one of them.
 const AGREEMENT_HZ: f64 = 1.0;
-/// Default transform: this many bins in the narrowest channel, so that its energy is mostly its own.
+/// Default transform: this many bins in the narrowest channel, so that its energy is mostly its
+/// own.
 const DEFAULT_BINS_PER_CHANNEL: f64 = 12.0;
 const DEFAULT_TRANSFORM_LENGTH_MIN: usize = 256;
 const TRANSFORM_LENGTH_MAX: usize = 1 << 20;
@@ -183,8 +184,8 @@ fn channel_fits(channel: &Channel, receiver: &Receiver, at: &Place) -> Result<()
     Ok(())
 }
 
-/// Two neighbours by lower edge. Checking neighbours is enough: the first pair that overlaps, in the
-/// order of lower edges, is always a pair of neighbours.
+/// Two neighbours by lower edge. Checking neighbours is enough: the first pair that overlaps, in
+/// the order of lower edges, is always a pair of neighbours.
 fn channels_are_apart(
     below: &AskedChannel,
     above: &AskedChannel,

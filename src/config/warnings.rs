@@ -32,8 +32,8 @@ pub(super) fn warnings(plan: &Plan) -> Vec<String> {
     let mut found = Vec::new();
     if plan.receiver.usable_bandwidth_hz >= plan.receiver.sample_rate_hz {
         found.push(format!(
-            "receiver.usable_bandwidth: {} is the whole sample rate; no front end is flat up to the \
-             edge of its block: 90 % of the sample rate is usual",
+            "receiver.usable_bandwidth: {} is the whole sample rate; no front end is flat up to \
+             the edge of its block: 90 % of the rate is usual",
             format_frequency(plan.receiver.usable_bandwidth_hz)
         ));
     }
@@ -66,8 +66,8 @@ fn rarely_on_offer(band: &Band) -> Option<Warning> {
     Some((
         "pfa",
         format!(
-            "a truly idle channel would be on offer for {:.1} % of the time only (pfa {}, dwell {}, \
-             hold-off {}, check time {}; 95 % is wanted): {cure} would do",
+            "a truly idle channel would be on offer for {:.1} % of the time only (pfa {}, \
+             dwell {}, hold-off {}, check time {}; 95 % is wanted): {cure} would do",
             // Rounded down: 94.96 % must not read as 95.0 %.
             (share * 1000.0).floor() / 10.0,
             format_share(band.pfa),
@@ -108,8 +108,8 @@ fn slices_are_blurred(plan: &Plan, band: &Band) -> Option<Warning> {
         (
             "slice",
             format!(
-                "{} is shorter than half a transform ({}), which blurs neighbouring slices: a longer \
-                 slice or a smaller spectrum.transform_length would tell them apart",
+                "{} is shorter than half a transform ({}), which blurs neighbouring slices: a \
+                 longer slice or a smaller spectrum.transform_length would tell them apart",
                 format_duration(band.slice_s),
                 format_duration(half_s)
             ),
