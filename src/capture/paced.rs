@@ -234,8 +234,8 @@ mod tests {
         (Arc::clone(&clock), Paced::with_pace(slow, clock, pace))
     }
 
-    /// Start of the block on both clocks since the clock's first moment [ms], its gap flag, and when
-    /// it was delivered [ms].
+    /// Start of the block on both clocks since the clock's first moment [ms], its gap flag, and
+    /// when it was delivered [ms].
     fn next(source: &mut Paced<Slow>, clock: &VirtualClock) -> (i64, i64, bool, i64) {
         let first = VirtualClock::new().now();
         let mut block = empty_block(100);
@@ -250,8 +250,8 @@ mod tests {
 
     #[test]
     fn blocks_come_in_real_time_with_stamps_of_the_clock_and_the_sample_count() {
-        // The first read takes 5 ms: the first sample is stamped after it. The last read is slow, but
-        // not by more than the bound: its block comes late, and the count goes on.
+        // The first read takes 5 ms: the first sample is stamped after it. The fourth read is slow,
+        // but not by more than the bound: its block comes late, and the count goes on.
         let (clock, mut source) = paced(&[5, 0, 20, 700, 0], 2);
         assert_eq!(next(&mut source, &clock), (5, 5, true, 105));
         assert_eq!(next(&mut source, &clock), (105, 105, false, 205));

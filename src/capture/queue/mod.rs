@@ -24,7 +24,7 @@ const STOP_POLL: Duration = Duration::from_millis(20);
 /// What capture does with a new block while the queue is full.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum WhenFull {
-    /// Drops it and counts it; the next block has `gap_before`. For anything that runs in real time.
+    /// Drops it and counts it; the next block has `gap_before`. For whatever runs in real time.
     Drop,
     /// Waits until there is room: nothing is lost. For a replay.
     Wait,
@@ -80,7 +80,7 @@ pub fn spawn(
     assert!(depth > 0, "a queue must have room for a block");
     // One block in the queue for each of its places, one with the reader, one being filled.
     let pool = depth + 2;
-    // To wait, capture waits for a buffer and not for the queue, since it can then see the stop flag.
+    // With `Wait`, capture waits for a buffer, not for the queue: there it can see the stop flag.
     let queue = if when_full == WhenFull::Wait { pool } else { depth };
     let (filled_in, filled_out) = mpsc::sync_channel(queue);
     let (spent_in, spent_out) = mpsc::sync_channel(pool);

@@ -47,7 +47,7 @@ impl SampleFormat {
     }
 
     /// Appends the samples that `bytes` (a whole number of samples) hold; returns how many of them
-    /// had a component at the rail. A float is at the rail from 1 on; NaN is not, and passes through.
+    /// had a component at the rail. A float is at the rail from 1 on; NaN is not, and passes.
     pub(super) fn decode(self, bytes: &[u8], samples: &mut Vec<Complex32>) -> usize {
         match self {
             SampleFormat::Ci16Le => decode_pairs(bytes, samples, |component| {
@@ -69,8 +69,8 @@ impl SampleFormat {
     }
 }
 
-/// Appends pairs of `N`-byte components; `component` tells a component's value and whether it stands
-/// at the rail. Returns the number of samples with a component there.
+/// Appends pairs of `N`-byte components; `component` tells a component's value and whether it
+/// stands at the rail. Returns the number of samples with a component there.
 fn decode_pairs<const N: usize>(
     bytes: &[u8],
     samples: &mut Vec<Complex32>,

@@ -17,8 +17,8 @@ use crate::detection::time::Utc;
 /// The largest metadata file that is read [bytes]: some hundred thousand annotations.
 const META_BYTES_MAX: u64 = 256 << 20;
 
-/// The dates that are believed, 1970-01-01 to 2100-01-01 [ns]: with them and recordings shorter than
-/// [`super::segments::DURATION_MAX_S`] no sum of times overflows.
+/// The end of the dates that are believed, 2100-01-01; they start with 1970. As long as recordings
+/// are shorter than [`super::segments::DURATION_MAX_S`], no sum of times then overflows.
 const UTC_END: Utc = Utc(4_102_444_800_000_000_000);
 
 /// What somebody noted about a part of a recording (SigMF `annotations`).

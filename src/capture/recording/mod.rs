@@ -1,7 +1,7 @@
 //! Reads a SigMF recording (an open standard) as a source of sample blocks.
 //!
-//! It streams: a recording of 100 GB needs no more memory than a small one. It must never guess what
-//! the recording does not state: the centre, or samples that were lost.
+//! It streams: a recording of 100 GB needs no more memory than a small one. It must never guess
+//! what the recording does not state, and never close over a gap that it does state.
 
 use std::ffi::OsString;
 use std::fs::{self, File};
@@ -36,8 +36,8 @@ pub struct Told {
 
 /// A SigMF recording of one channel at one centre frequency.
 ///
-/// Samples before the first entry of `captures` belong to no segment and are not read. `core:sha512`
-/// is not verified on reading.
+/// Samples before the first entry of `captures` belong to no segment and are not read.
+/// `core:sha512` is not verified on reading: that would mean reading everything twice.
 #[derive(Debug)]
 pub struct Recording {
     meta_path: PathBuf,
@@ -60,8 +60,8 @@ impl Recording {
     /// either. Only the metadata are read yet.
     ///
     /// # Errors
-    /// A file that is missing, not of the standard or not of the kinds that are read; statements that
-    /// contradict each other or what was told; no centre frequency stated or told.
+    /// A file that is missing, not of the standard or not of the kinds that are read; statements
+    /// that contradict each other or what was told; no centre frequency stated or told.
     pub fn open(path: &Path, told: Told) -> Result<Recording, CaptureError> {
         let (meta_path, stem) = meta_path(path)?;
         let metadata = Metadata::load(&meta_path)?;

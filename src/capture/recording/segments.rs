@@ -7,8 +7,8 @@ use super::metadata::{Segment, utc_text};
 use crate::capture::CaptureError;
 use crate::detection::time::{Utc, samples_to_nanos};
 
-/// The longest recording, gaps included, that is believed [s]: 31 years. Beyond, a rate, an index or
-/// a date is surely wrong, and sums of nanoseconds would come near their limit.
+/// The longest recording, gaps included, that is believed [s]: 31 years. Beyond, a rate, an index
+/// or a date is surely wrong, and sums of nanoseconds would come near their limit.
 pub(super) const DURATION_MAX_S: f64 = 1e9;
 
 /// The least deviation of a stated date that counts as one [ns]: dates are mostly written to the
