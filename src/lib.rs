@@ -20,5 +20,6 @@
 //! The rule of stairs: `command` and `daemon` may use every room; a room uses `detection` and nothing
 //! else. `tests/house.rs` enforces it.
 
+pub mod capture;
 pub mod config;
 pub mod detection;
