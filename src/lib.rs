@@ -23,3 +23,4 @@
 pub mod capture;
 pub mod config;
 pub mod detection;
+pub mod history;
