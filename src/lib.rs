@@ -21,3 +21,4 @@
 //! else. `tests/house.rs` enforces it.
 
 pub mod detection;
+pub mod scene;
