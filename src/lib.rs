@@ -20,4 +20,5 @@
 //! The rule of stairs: `command` and `daemon` may use every room; a room uses `detection` and nothing
 //! else. `tests/house.rs` enforces it.
 
+pub mod answers;
 pub mod detection;
