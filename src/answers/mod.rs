@@ -38,7 +38,7 @@ use problem::Problem;
 const REQUEST_SECONDS_MAX: u64 = 10;
 
 /// Open requests are given this long once shutdown has begun.
-const SHUTDOWN_GRACE: Duration = Duration::from_millis(1500);
+const SHUTDOWN_GRACE: Duration = Duration::from_secs(1);
 
 /// Sent with every answer. Scripts, styles and figures come from the node itself or not at all.
 const HEADERS: [(HeaderName, HeaderValue); 4] = [
