@@ -4,6 +4,8 @@
 
 #[path = "api/now.rs"]
 mod now;
+#[path = "api/past.rs"]
+mod past;
 #[path = "api/served.rs"]
 mod served;
 #[path = "api/support.rs"]

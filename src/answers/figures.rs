@@ -60,10 +60,11 @@ pub(super) fn moment(utc: Utc) -> String {
     format!("{timestamp:.3}")
 }
 
-/// Reads a moment written as RFC 3339; `None` if it is none, or outside the years 1678 to 2261.
+/// Reads a moment written as RFC 3339; `None` if it is none, or outside the years 1970 to 2261. No
+/// record is older, and the margin to the ends of 64 bits keeps all arithmetic on it safe.
 pub(super) fn parse_moment(text: &str) -> Option<Utc> {
     let timestamp: Timestamp = text.parse().ok()?;
-    i64::try_from(timestamp.as_nanosecond()).ok().map(Utc)
+    i64::try_from(timestamp.as_nanosecond()).ok().filter(|nanos| *nanos >= 0).map(Utc)
 }
 
 /// Nanoseconds in one day of 86 400 s.
@@ -97,6 +98,7 @@ mod tests {
         assert_eq!(moment(Utc(-1)), "1969-12-31T23:59:59.999Z");
         assert_eq!(parse_moment("1970-01-01T01:00:00+01:00"), Some(Utc(0)));
         assert_eq!(parse_moment("9999-01-01T00:00:00Z"), None);
+        assert_eq!(parse_moment("1969-12-31T23:59:59Z"), None);
         assert_eq!(parse_moment("yesterday"), None);
         // The extremes of 64 bits are still moments.
         assert_eq!(&moment(Utc(i64::MIN))[..4], "1677");

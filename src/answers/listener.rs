@@ -17,7 +17,7 @@ use tokio::sync::{OwnedSemaphorePermit, Semaphore};
 use tokio::time::{Instant, Sleep};
 
 /// Connections open at once; further ones wait in the system's queue. A browser opens six.
-const CONNECTIONS_MAX: usize = 128;
+pub(super) const CONNECTIONS_MAX: usize = 128;
 
 /// A connection on which nothing moves for this long is closed: longer than any answer takes, and
 /// longer than a page that asks every few seconds ever pauses.
@@ -30,8 +30,9 @@ pub(super) struct Bounded {
 }
 
 impl Bounded {
-    pub(super) fn new(listener: TcpListener) -> Bounded {
-        Bounded { listener, permits: Arc::new(Semaphore::new(CONNECTIONS_MAX)) }
+    /// At most `connections_max` connections, 1 or more.
+    pub(super) fn new(listener: TcpListener, connections_max: usize) -> Bounded {
+        Bounded { listener, permits: Arc::new(Semaphore::new(connections_max)) }
     }
 }
 
@@ -164,5 +165,19 @@ mod tests {
         assert_eq!(asker.try_write(b"x").unwrap(), 1);
         assert_eq!(read_byte(&mut connection).await.unwrap(), b'x');
         assert!(connection.silence.deadline() > before);
+    }
+
+    #[tokio::test]
+    async fn a_connection_beyond_the_limit_waits_until_another_is_closed() {
+        let listener = TcpListener::bind("127.0.0.1:0").await.unwrap();
+        let address = listener.local_addr().unwrap();
+        let mut bounded = Bounded::new(listener, 1);
+        let _first_asker = TcpStream::connect(address).await.unwrap();
+        let _second_asker = TcpStream::connect(address).await.unwrap();
+        let (first, _) = bounded.accept().await;
+        let early = tokio::time::timeout(Duration::from_millis(20), bounded.accept()).await;
+        assert!(early.is_err(), "accepted beyond the limit");
+        drop(first);
+        bounded.accept().await;
     }
 }

@@ -9,6 +9,7 @@ mod listener;
 mod now;
 mod offers;
 mod page;
+mod past;
 mod problem;
 mod query;
 
@@ -16,7 +17,7 @@ use std::sync::Arc;
 use std::time::Duration;
 
 use axum::Router;
-use axum::extract::Request;
+use axum::extract::{Request, State};
 use axum::http::{HeaderName, HeaderValue, Method, Uri, header};
 use axum::middleware::{self, Next};
 use axum::response::{IntoResponse, Response};
@@ -32,10 +33,11 @@ use crate::detection::plan::Plan;
 use crate::detection::standing::Standing;
 use crate::detection::time::{Stamp, Utc};
 use crate::detection::verdict::DwellReport;
+use crate::history::Reader;
 use problem::Problem;
 
-/// A request is answered within this or not at all [s].
-const REQUEST_SECONDS_MAX: u64 = 10;
+/// A request is answered within this or not at all.
+const REQUEST_TIME_MAX: Duration = Duration::from_secs(10);
 
 /// Open requests are given this long once shutdown has begun.
 const SHUTDOWN_GRACE: Duration = Duration::from_secs(1);
@@ -96,6 +98,8 @@ pub struct AppState {
     pub live: watch::Receiver<Arc<Live>>,
     /// Reads the health of the node at this moment. Must not block.
     pub health: Arc<dyn Fn() -> Health + Send + Sync>,
+    /// Reads the history; `None` when the node keeps none.
+    pub reader: Option<Reader>,
     /// The clock that stamps the samples.
     pub clock: Arc<dyn Fn() -> Stamp + Send + Sync>,
 }
@@ -123,6 +127,8 @@ pub fn app(state: AppState) -> Router {
         .route("/v1/channels", get(now::channels))
         .route("/v1/channels/{id}", get(now::channel))
         .route("/v1/availability", get(offers::offers))
+        .route("/v1/occupancy", get(past::occupancy))
+        .route("/v1/runs", get(past::runs))
         .route("/v1/spectrum", get(now::spectrum))
         .route("/v1/health", get(now::health))
         .merge(page::routes())
@@ -130,16 +136,15 @@ pub fn app(state: AppState) -> Router {
         .method_not_allowed_fallback(|method: Method| async move {
             Problem::method_not_allowed(method.as_str())
         })
-        .layer(middleware::from_fn(bound_and_label))
+        .layer(middleware::from_fn_with_state(REQUEST_TIME_MAX, bound_and_label))
         .with_state(state)
 }
 
 /// Bounds the time that a request may take and puts the common headers on its answer.
-async fn bound_and_label(request: Request, next: Next) -> Response {
-    let limit = Duration::from_secs(REQUEST_SECONDS_MAX);
+async fn bound_and_label(State(limit): State<Duration>, request: Request, next: Next) -> Response {
     let mut response = match tokio::time::timeout(limit, next.run(request)).await {
         Ok(response) => response,
-        Err(_elapsed) => Problem::timeout(REQUEST_SECONDS_MAX).into_response(),
+        Err(_elapsed) => Problem::timeout(limit).into_response(),
     };
     let headers = response.headers_mut();
     headers.extend(HEADERS);
@@ -160,9 +165,10 @@ pub async fn serve(
         shutdown.await;
         drop(closing);
     };
-    let served = axum::serve(listener::Bounded::new(listener), app(state))
-        .with_graceful_shutdown(signal)
-        .into_future();
+    let served =
+        axum::serve(listener::Bounded::new(listener, listener::CONNECTIONS_MAX), app(state))
+            .with_graceful_shutdown(signal)
+            .into_future();
     let overdue = async move {
         // An error is the word: the sender was dropped, shutdown has begun.
         let _closing_dropped = closed.await;
@@ -172,5 +178,29 @@ pub async fn serve(
         // Never an error: failures to accept are waited out by the listener.
         _result = served => {}
         () = overdue => tracing::info!("requests still open were abandoned at shutdown"),
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use axum::body::{Body, to_bytes};
+    use axum::http::StatusCode;
+    use tower::ServiceExt;
+
+    #[tokio::test]
+    async fn an_answer_that_takes_too_long_is_a_problem_with_the_common_headers() {
+        let limit = Duration::from_millis(10);
+        let service = Router::new()
+            .route("/never", get(std::future::pending::<()>))
+            .layer(middleware::from_fn_with_state(limit, bound_and_label));
+        let request = Request::builder().uri("/never").body(Body::empty()).unwrap();
+        let response = service.oneshot(request).await.unwrap();
+        assert_eq!(response.status(), StatusCode::SERVICE_UNAVAILABLE);
+        assert_eq!(response.headers()[header::CACHE_CONTROL], "no-store");
+        let body = to_bytes(response.into_body(), 1 << 12).await.unwrap();
+        let problem: serde_json::Value = serde_json::from_slice(&body).unwrap();
+        assert_eq!(problem["code"], "timeout");
+        assert_eq!(problem["detail"], "No answer within 0.01 s; ask for a shorter range.");
     }
 }

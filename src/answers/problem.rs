@@ -3,6 +3,8 @@
 //! A problem says what the asker can act on and nothing of the program's insides: what went wrong
 //! behind the counter is logged where it happened.
 
+use std::time::Duration;
+
 use axum::http::{HeaderValue, StatusCode, header};
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
@@ -126,7 +128,8 @@ impl Problem {
     }
 
     /// The answer took too long.
-    pub(super) fn timeout(limit_s: u64) -> Problem {
+    pub(super) fn timeout(limit: Duration) -> Problem {
+        let limit_s = limit.as_secs_f64();
         let detail = format!("No answer within {limit_s} s; ask for a shorter range.");
         Problem::new(StatusCode::SERVICE_UNAVAILABLE, "timeout", "Took too long", detail)
     }

@@ -72,7 +72,7 @@ impl Parameters {
             None => Err(Problem::bad_value(
                 key,
                 text,
-                "a time in RFC 3339 such as 2026-03-01T06:00:00Z, years 1678 to 2261, with the + \
+                "a time in RFC 3339 such as 2026-03-01T06:00:00Z, years 1970 to 2261, with the + \
                  of an offset written as %2B",
             )),
         }

@@ -158,6 +158,7 @@ pub fn state(dwells: u64, now: Stamp) -> AppState {
         plan: Arc::new(plan),
         live,
         health: Arc::new(well),
+        reader: None,
         clock: Arc::new(move || now),
     }
 }
