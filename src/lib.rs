@@ -22,3 +22,4 @@
 
 pub mod answers;
 pub mod detection;
+pub mod history;
