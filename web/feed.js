@@ -1,0 +1,80 @@
+// Asking the node again and again, and knowing how old its last answer is.
+// A feed never presents an old answer as a new one: its age counts from when the question was
+// asked, and an answer whose own clock stands still does not count as an answer.
+
+const TIMEOUT_MS = 2500;
+
+/** One resource of the node, polled. */
+export class Feed {
+  /**
+   * `path` gives the resource, as a function called before each question; `periodMs` the time from
+   * question to question; `staleMs` the age at which the answer stops being current;
+   * `onAnswer` gets each answer.
+   */
+  constructor(path, periodMs, staleMs, onAnswer) {
+    this.path = path;
+    this.periodMs = periodMs;
+    this.staleMs = staleMs;
+    this.onAnswer = onAnswer;
+    this.answer = null;
+    this.begun = moment();
+    this.asked = null;
+    this.timer = 0;
+    this.asking = false;
+  }
+
+  /** Asks now, then every period. */
+  start() {
+    this.begun = moment();
+    this.ask();
+  }
+
+  /** The age of the newest answer [ms]; before the first, the time waited so far. */
+  ageMs() {
+    return since(this.asked ?? this.begun);
+  }
+
+  /** Whether there is an answer and it is young enough to speak of now. */
+  current() {
+    return this.answer !== null && this.ageMs() <= this.staleMs;
+  }
+
+  /** Asks at once, unless a question is already out. */
+  async ask() {
+    if (this.asking) return;
+    clearTimeout(this.timer);
+    this.asking = true;
+    const asked = moment();
+    try {
+      const response = await fetch(this.path(), {
+        cache: "no-store", headers: { accept: "application/json" },
+        signal: AbortSignal.timeout(TIMEOUT_MS),
+      });
+      if (response.ok) this.take(await response.json(), asked);
+    } catch {
+      // No answer is an ordinary event here: the age grows, and the page says so.
+    }
+    this.asking = false;
+    const wait = Math.max(100, this.periodMs - since(asked));
+    this.timer = setTimeout(() => this.ask(), wait);
+  }
+
+  take(answer, asked) {
+    if (typeof answer !== "object" || answer === null) return;
+    const standsStill = answer.now !== undefined && this.answer?.now === answer.now;
+    if (standsStill) return;
+    this.answer = answer;
+    this.asked = asked;
+    this.onAnswer(answer);
+  }
+}
+
+// Two clocks, because each has a blind spot: the steady one may stop while a laptop sleeps, the
+// wall clock may be set back. The larger of the two ages is the careful one.
+function moment() {
+  return { steady: performance.now(), wall: Date.now() };
+}
+
+function since(then) {
+  return Math.max(performance.now() - then.steady, Date.now() - then.wall);
+}
