@@ -2,7 +2,7 @@
 //! turned into time by one inverse transform, and cross-faded from block to block.
 //!
 //! The cross-fade is half of the block long, with the flanks sine and cosine:
-//! - Noise is independent from block to block, so powers add: sin^2 + cos^2 = 1 keeps it stationary.
+//! - Noise is independent from block to block, so powers add: sin^2 + cos^2 = 1 keeps it even.
 //! - A signal carries the same flanks before its own transform, so amplitudes add as sin^2 + cos^2
 //!   too, and it runs on unbroken. Only the flanks' own spectrum is cut off at half the source's
 //!   rate: that leaves products more than 90 dB below the signal one raster step (25 kHz) away.
