@@ -4,7 +4,7 @@
 //! give the same samples, however they are fetched, on the same machine to the last bit; another
 //! processor may round the transforms differently. Nothing here may ever be taken for a real site.
 //!
-//! - [`SceneSpec`] says what there is to hear; [`SceneSpec::lower_saltmarsh`] is the one that ships.
+//! - [`SceneSpec`] says what there is to hear; [`SceneSpec::lower_saltmarsh`] ships with it.
 //! - [`Scene`] makes the samples.
 //! - [`Truth`] knows who was on and when.
 

@@ -15,8 +15,8 @@ use super::timeline::Transmission;
 /// Samples of the scene for one sample of a source.
 pub(super) const DECIMATION: usize = 64;
 
-/// Length of the key's ramps, inside the time on [s]. A raised cosine of 1 ms has fallen below
-/// -90 dB of the carrier at the channel's edge, measured over a slice of 10 ms.
+/// Length of the key's ramps, inside the time on [s]. A raised cosine of 1 ms keeps what
+/// the key throws into the next channel more than 90 dB down, over a slice of 10 ms.
 pub(super) const RAMP_S: f64 = 1e-3;
 
 /// Levels a second of voice [Hz]: twice the highest audio frequency of 3 kHz.

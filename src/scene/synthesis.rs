@@ -1,11 +1,11 @@
 //! From spec and seed to samples: noise and signals are laid out over the bins of a transform,
 //! turned into time by one inverse transform, and cross-faded from block to block.
 //!
-//! The cross-fade is a quarter of the block long, with the flanks sine and cosine:
-//! - Noise is independent from block to block, so powers add: sin^2 + cos^2 = 1 keeps it stationary.
+//! The cross-fade is half of the block long, with the flanks sine and cosine:
+//! - Noise is independent from block to block, so powers add: sin^2 + cos^2 = 1 keeps it even.
 //! - A signal carries the same flanks before its own transform, so amplitudes add as sin^2 + cos^2
-//!   too, and it runs on unbroken. Short of the flanks' own spectrum, which is cut off at half the
-//!   source's rate: that leaves products some 85 dB below the signal one raster step away.
+//!   too, and it runs on unbroken. Only the flanks' own spectrum is cut off at half the source's
+//!   rate: that leaves products more than 90 dB below the signal one raster step (25 kHz) away.
 //!
 //! It must never draw a random number in an order that depends on how samples are fetched.
 
@@ -24,7 +24,7 @@ use super::truth::{Purpose, Truth, streams};
 /// Transform length [samples].
 const BLOCK: usize = 16_384;
 /// Length of the cross-fade between consecutive blocks [samples].
-const FADE: usize = BLOCK / 4;
+const FADE: usize = BLOCK / 2;
 /// New samples in each block.
 pub(super) const HOP: usize = BLOCK - FADE;
 /// The same three at the sources' rate.
@@ -36,7 +36,7 @@ const SOURCE_HOP: usize = HOP / DECIMATION;
 pub struct Scene {
     spec: SceneSpec,
     truth: Truth,
-    voices: Vec<Voice>,
+    sources: Vec<PlacedSource>,
     noise: Noise,
     inverse: Arc<dyn Fft<f32>>,
     source_forward: Arc<dyn Fft<f32>>,
@@ -58,7 +58,7 @@ pub struct Scene {
 }
 
 /// A source and its place in the spectrum.
-struct Voice {
+struct PlacedSource {
     source: Source,
     /// The bin that the source's zero frequency falls on, from the block's middle.
     bin: i64,
@@ -87,15 +87,15 @@ impl Scene {
         let source_forward = planner.plan_fft_forward(SOURCE_BLOCK);
         let scratch_length =
             inverse.get_inplace_scratch_len().max(source_forward.get_inplace_scratch_len());
-        let voices = spec
+        let sources = spec
             .users
             .iter()
             .zip(streams(seed, Purpose::Modulation))
-            .map(|(user, rng)| Voice::new(&spec, user, rng))
+            .map(|(user, rng)| PlacedSource::new(&spec, user, rng))
             .collect();
         let mut scene = Scene {
             truth: Truth::new(&spec, seed),
-            voices,
+            sources,
             noise: Noise::new(&spec, seed),
             inverse,
             source_forward,
@@ -162,13 +162,13 @@ impl Scene {
         self.tail.copy_from_slice(&self.block[HOP..]);
         self.noise.fill(&mut self.block);
         let new_from = self.blocks * HOP as u64;
-        for (user_index, voice) in self.voices.iter_mut().enumerate() {
-            voice.advance(&mut self.truth, user_index, new_from);
-            if voice.on.0 || voice.on.1 {
-                self.source_block.copy_from_slice(&voice.signal);
+        for (user_index, placed) in self.sources.iter_mut().enumerate() {
+            placed.advance(&mut self.truth, user_index, new_from);
+            if placed.on.0 || placed.on.1 {
+                self.source_block.copy_from_slice(&placed.signal);
                 shape(&mut self.source_block, &self.source_rise);
                 self.source_forward.process_with_scratch(&mut self.source_block, &mut self.scratch);
-                voice.place(&self.source_block, self.blocks, &mut self.block);
+                placed.place(&self.source_block, self.blocks, &mut self.block);
             }
         }
         self.inverse.process_with_scratch(&mut self.block, &mut self.scratch);
@@ -181,13 +181,13 @@ impl Scene {
     }
 }
 
-impl Voice {
-    fn new(spec: &SceneSpec, user: &User, rng: Xoshiro256PlusPlus) -> Voice {
+impl PlacedSource {
+    fn new(spec: &SceneSpec, user: &User, rng: Xoshiro256PlusPlus) -> PlacedSource {
         check(spec, user);
         let bin_hz = spec.sample_rate_hz / BLOCK as f64;
         let offset_hz = user.centre_hz - spec.centre_hz;
         let bin = (offset_hz / bin_hz).round();
-        Voice {
+        PlacedSource {
             source: Source::new(user, offset_hz - bin * bin_hz, spec.sample_rate_hz, rng),
             bin: bin as i64,
             signal: vec![Complex32::ZERO; SOURCE_BLOCK],
