@@ -5,11 +5,14 @@
 
 #[path = "history/faults.rs"]
 mod faults;
+#[path = "history/keeper.rs"]
+mod keeper;
 #[path = "history/support.rs"]
 mod support;
 
+use fallowband::detection::time::Utc;
 use fallowband::detection::verdict::{Reason, Reasons};
-use fallowband::history::{History, HistoryState, Reader, RunState};
+use fallowband::history::{History, HistoryState, Identity, Reader, RunState};
 use rand_core::{Rng, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 use support::*;
@@ -103,7 +106,7 @@ fn live_through(path: &std::path::Path, dice: &mut Dice, channels: usize) -> Vec
 fn assert_answers(reader: &Reader, name: &str, line: &Line, (from, to, now): (i64, i64, i64)) {
     let moment = |cell: i64| at(cell * STEP_MS);
     let end = to.min(now).max(from);
-    let cell_of = |utc: fallowband::detection::time::Utc| (utc.0 / 1_000_000 - BEGIN_MS) / STEP_MS;
+    let cell_of = |utc: Utc| (utc.0 / 1_000_000 - BEGIN_MS) / STEP_MS;
 
     let full = reader.runs(name, moment(from), moment(to), moment(now), 1_000_000).unwrap();
     let mut covered = from;
@@ -239,8 +242,7 @@ fn a_changed_plan_makes_a_new_identity_and_leaves_the_older_as_it_was() {
 
     let mut moved = plan(1);
     moved.channels[0].centre_hz += 12.5e3;
-    let changed =
-        || fallowband::history::Identity { configuration_text: "# moved\n".into(), ..identity() };
+    let changed = || Identity { configuration_text: "# moved\n".into(), ..identity() };
     for start_ms in [5_000, 6_000] {
         let second = History::open(&path, &changed(), &moved, quick()).unwrap();
         second.writer.offer(same(start_ms, 1_000, 1, RunState::Occupied));
