@@ -4,7 +4,7 @@
 import { byId, make, setAttribute, setHidden, setItems, setText } from "./dom.js";
 import {
   counted, decibels, duration, instant, isNumber, kilohertz, level, megahertz, reasonName,
-  reasonSentence, stateOf, utcTime, verdictSentence, when,
+  reasonSentence, stateOf, tens, utcTime, verdictSentence, when,
 } from "./text.js";
 
 const OFFERS_SHOWN = 8;
@@ -19,13 +19,16 @@ export function updateDetail(view, id) {
   if (!channel) return;
   const band = view.bands.get(channel.band);
   setText(byId("detail-title"), channel.id);
-  setText(byId("detail-place"), `${megahertz(channel.centre_hz)} MHz, ${kilohertz(channel.bandwidth_hz)} wide`
-    + `, band ${channel.band}${channel.protected ? ", protected" : ""}`);
+  setText(byId("detail-place"), `${megahertz(channel.centre_hz)} MHz, `
+    + `${kilohertz(channel.bandwidth_hz)} wide, band ${channel.band}`
+    + (channel.protected ? ", protected" : ""));
   setText(byId("detail-verdict"), view.current
     ? verdictSentence(channel, band, view.reference, view.nowMs)
-    : `Unknown: the node does not answer. At ${utcTime(view.answeredMs)} UTC it said: ${stateOf(channel, true)}.`);
+    : `Unknown: the node does not answer. At ${utcTime(view.answeredMs)} UTC it said: `
+      + `${stateOf(channel, true)}.`);
   setText(byId("detail-offer"), offerWords(view, channel));
-  setItems(byId("detail-reasons"), reasonCodes(view, channel).map((code) => reasonSentence(code, band)));
+  const reasons = reasonCodes(view, channel).map((code) => reasonSentence(code, band));
+  setItems(byId("detail-reasons"), reasons);
   setText(byId("detail-last"), lastWords(view, channel));
   updateLevels(view, channel, band);
 }
@@ -34,7 +37,8 @@ function offerWords(view, channel) {
   if (!view.offersCurrent) return "Not on offer: there is no current answer.";
   const rank = view.offers.findIndex((offer) => offer.channel === channel.id);
   if (rank < 0) return "Not on offer.";
-  return `On offer, ${rank === 0 ? "the longest idle" : `number ${rank + 1}`} of ${view.offers.length}; `
+  const place = rank === 0 ? "the longest idle" : `number ${rank + 1}`;
+  return `On offer, ${place} of ${view.offers.length}; `
     + `this answer is valid for ${duration(view.offers[rank].valid_for_ms / 1000)}.`;
 }
 
@@ -52,11 +56,12 @@ function lastWords(view, channel) {
   const detected = last === null ? "No detection on record."
     : `Last detection ${when(last, view.nowMs)}, ${duration((view.nowMs - last) / 1000)} ago.`;
   const dwell = instant(channel.time);
-  const measured = dwell === null ? "No dwell yet." : `Newest dwell began ${when(dwell, view.nowMs)}.`;
+  const measured = dwell === null ? "No dwell yet."
+    : `Newest dwell began ${when(dwell, view.nowMs)}.`;
   return `${detected} ${measured}`;
 }
 
-/** A level axis for the one channel whose "why" is asked: five marks on one scale of whole tens. */
+/** A level axis for the channel whose "why" is asked: five marks on one scale of whole tens. */
 function updateLevels(view, channel, band) {
   const values = { ...channel, protection_level_db: band?.protection_level_db };
   const rows = [...byId("levels").rows];
@@ -69,13 +74,12 @@ function updateLevels(view, channel, band) {
     const mark = row.querySelector(".axis i");
     setHidden(mark, !isNumber(value));
     if (isNumber(value)) {
-      mark.style.setProperty("--at", `${(100 * (value - from) / (to - from)).toFixed(2)}%`);
+      const share = (value - from) / (to - from);
+      mark.style.setProperty("--at", `${(100 * share).toFixed(2)}%`);
     }
   }
-  const axis = byId("levels");
-  axis.style.setProperty("--steps", String(known.length ? (to - from) / LEVEL_STEP_DB : 1));
-  setText(byId("level-from"), known.length ? level(from, "").trim() : "");
-  setText(byId("level-to"), known.length ? level(to, view.reference) : "");
+  setText(byId("level-from"), known.length ? tens(from) : "");
+  setText(byId("level-to"), known.length ? tens(to) : "");
 }
 
 /** Makes the rows of the list of offers, once; they are filled and emptied in place. */
@@ -86,7 +90,8 @@ export function makeOfferRows(onChoose) {
     button.type = "button";
     button.addEventListener("click", () => onChoose(button.textContent));
     body.append(make("tr", "", "", [
-      make("td", "rank"), make("td", "", "", [button]), make("td"), make("td"), make("td"), make("td"),
+      make("td", "rank"), make("td", "", "", [button]), make("td"), make("td"), make("td"),
+      make("td"),
     ]));
   }
 }
@@ -110,7 +115,8 @@ export function updateOffers(view) {
   });
   setText(byId("offers-note"), offersNote(view, offers.length));
   const more = offers.length - OFFERS_SHOWN;
-  setText(byId("offers-more"), more > 0 ? `${counted(more, "channel", "channels")} more on offer, ringed on the sheet.` : "");
+  setText(byId("offers-more"), more > 0
+    ? `${counted(more, "channel", "channels")} more on offer, ringed on the sheet.` : "");
 }
 
 function offersNote(view, count) {
@@ -120,7 +126,8 @@ function offersNote(view, count) {
   }
   const asked = `As answered at ${utcTime(view.offersMs)} UTC`;
   return count === 0 ? `${asked}: nothing is on offer.`
-    : `${asked}, longest idle first. A radio asks for itself, and again before its answer runs out.`;
+    : `${asked}, longest idle first. A radio asks for itself, and again before its answer `
+      + "runs out.";
 }
 
 /** Counts the refusals by reason, most frequent first. */
@@ -129,12 +136,15 @@ export function updateRefusals(view) {
   setText(byId("refusals-title"), refusals.length === 0 ? "Why the others are refused"
     : `Why ${counted(refusals.length, "channel is", "channels are")} refused`);
   const byReason = new Map();
-  for (const { channel, reasons } of refusals) {
-    for (const code of reasons ?? []) {
-      byReason.set(code, [...(byReason.get(code) ?? []), channel]);
+  const reasonsOf = new Map(refusals.map(({ channel, reasons }) => [channel, reasons ?? []]));
+  // In the order of the sheet, so that the list does not stir from poll to poll.
+  for (const { id } of view.channels) {
+    for (const code of reasonsOf.get(id) ?? []) {
+      byReason.set(code, [...(byReason.get(code) ?? []), id]);
     }
   }
-  const ranked = [...byReason].sort((a, b) => b[1].length - a[1].length || a[0].localeCompare(b[0]));
+  const ranked = [...byReason]
+    .sort((a, b) => b[1].length - a[1].length || a[0].localeCompare(b[0]));
   const list = byId("refusal-list");
   while (list.children.length > ranked.length) list.lastElementChild.remove();
   while (list.children.length < ranked.length) {

@@ -25,7 +25,7 @@ export class Lately {
     for (const kind of ["pointermove", "pointerdown"]) {
       this.chart.addEventListener(kind, (event) => this.read(event));
     }
-    this.chart.addEventListener("pointerleave", () => setHiddenMark(byId("chart-cursor"), true));
+    this.chart.addEventListener("pointerleave", () => markAbsent(byId("chart-cursor"), true));
   }
 
   /** Draws the record anew for these channels, in this order. */
@@ -49,7 +49,8 @@ export class Lately {
     this.layout = layout;
     setAttribute(this.chart, "viewBox", `0 0 ${layout.width} ${layout.height}`);
     setAttribute(this.chart, "data-drawn", "");
-    setBox(byId("chart-ground"), layout.left, layout.top, layout.plotWidth, layout.bottom - layout.top);
+    setBox(byId("chart-ground"), layout.left, layout.top, layout.plotWidth,
+      layout.bottom - layout.top);
     for (const [id, path] of Object.entries(strokes(this.record, layout))) {
       setAttribute(byId(id), "d", path);
     }
@@ -64,7 +65,7 @@ export class Lately {
     const { layout } = this;
     const row = this.channels.findIndex((channel) => channel.id === this.chosen);
     const box = byId("chart-selected");
-    setHiddenMark(box, row < 0);
+    markAbsent(box, row < 0);
     this.markLabel?.remove();
     if (row < 0) return;
     setBox(box, layout.left - 1, layout.y(row) - 0.5, layout.plotWidth + 2, layout.rowHeight);
@@ -86,14 +87,11 @@ export class Lately {
     const inside = channel !== undefined && column >= 0 && column < layout.columns;
     const startMs = layout.fromMs + column * QUARTER_MS;
     const quarter = inside ? this.record.quarter(channel.id, startMs) : null;
-    setHiddenMark(byId("chart-cursor"), quarter === null);
+    markAbsent(byId("chart-cursor"), quarter === null);
     if (quarter === null) return;
-    setBox(byId("chart-cursor"), layout.x(startMs), layout.y(row), layout.plotWidth / layout.columns,
-      layout.rowHeight);
-    const own = quarter.own_s > 0 ? `, own ${duration(quarter.own_s)}` : "";
-    setText(byId("readout"), `${channel.id}, ${quarterHour(startMs)}: `
-      + (quarter.occupancy === null ? "occupancy not known" : `occupied ${percent(quarter.occupancy)} of the known time`)
-      + `, unknown ${percent(quarter.unknown_share)}${own}.`);
+    setBox(byId("chart-cursor"), layout.x(startMs), layout.y(row),
+      layout.plotWidth / layout.columns, layout.rowHeight);
+    setText(byId("readout"), readoutWords(channel.id, startMs, quarter));
   }
 
   /** The headline and the table. */
@@ -106,14 +104,23 @@ export class Lately {
       .sort((a, b) => b[1] - a[1]).slice(0, 3)
       .map(([id, occupancy]) => `${id} (${percent(occupancy)})`).join(", ");
     const begins = firstMs >= endMs ? " Nothing is on record yet."
-      : firstMs > fromMs ? ` The record begins in the quarter hour from ${utcMinute(firstMs)} UTC.` : "";
+      : firstMs > fromMs ? ` The record begins at ${quarterHour(firstMs)}.` : "";
     const occupied = all.occupancy === null ? "Nothing is known"
       : `Occupied ${percent(all.occupancy)} of the known time`;
-    setText(byId("lately-line"), `${occupied} in the ${Math.round((endMs - fromMs) / HOUR_MS)} h to `
+    const hours = Math.round((endMs - fromMs) / HOUR_MS);
+    setText(byId("lately-line"), `${occupied} in the ${hours}\u00a0h to `
       + `${utcMinute(toMs)} UTC; ${percent(all.unknown_share)} of all time unknown.`
       + (busiest ? ` Busiest: ${busiest}.` : "") + begins);
     fillTable(this.channels, totals);
   }
+}
+
+function readoutWords(id, startMs, quarter) {
+  const occupied = quarter.occupancy === null ? "occupancy not known"
+    : `occupied ${percent(quarter.occupancy)} of the known time`;
+  const own = quarter.own_s > 0 ? `, own ${duration(quarter.own_s)}` : "";
+  return `${id}, ${quarterHour(startMs)}: ${occupied}, `
+    + `unknown ${percent(quarter.unknown_share)}${own}.`;
 }
 
 /** Where everything goes for a width [px]; null while the figure has no width. */
@@ -176,13 +183,15 @@ function texture(quarter) {
 }
 
 function box(left, top, right, bottom) {
-  return `M${left.toFixed(1)} ${top.toFixed(1)}H${right.toFixed(1)}V${bottom.toFixed(1)}H${left.toFixed(1)}Z`;
+  const [l, t, r, b] = [left, top, right, bottom].map((value) => value.toFixed(1));
+  return `M${l} ${t}H${r}V${b}H${l}Z`;
 }
 
 /** The hours at which the time axis is labelled. */
 function ticks({ fromMs, endMs, narrow }) {
   const hours = (endMs - fromMs) / HOUR_MS;
-  const step = HOUR_MS * (hours <= 3 ? 0.5 : hours <= 6 ? 1 : hours <= 12 ? 2 : 3) * (narrow ? 2 : 1);
+  const stepHours = hours <= 3 ? 0.5 : hours <= 6 ? 1 : hours <= 12 ? 2 : 3;
+  const step = stepHours * HOUR_MS * (narrow ? 2 : 1);
   const marks = [];
   for (let ms = Math.ceil(fromMs / step) * step; ms < endMs; ms += step) marks.push(ms);
   return marks;
@@ -230,7 +239,7 @@ function setBox(element, x, y, width, height) {
   }
 }
 
-function setHiddenMark(element, hidden) {
+function markAbsent(element, hidden) {
   element.classList.toggle("absent", hidden);
 }
 

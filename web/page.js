@@ -32,7 +32,7 @@ const healthFeed = new Feed(() => "v1/health", 2 * SECOND_MS, HEALTH_STALE_MS, s
 const recordFeed = new Feed(() => record.path(nowMs() ?? Date.now()), 30 * SECOND_MS, Infinity,
   takeRecord);
 
-/** The node's time [ms since the epoch], carried on from its newest answer; null before the first. */
+/** The node's time [ms], carried on from its newest answer; null before the first. */
 function nowMs() {
   const answered = instant(channelFeed.answer?.now ?? nodeFeed.answer?.now);
   const feed = channelFeed.answer ? channelFeed : nodeFeed;
@@ -125,12 +125,16 @@ function showNow() {
 }
 
 function headline(view) {
-  if (!view.current) return "Nothing may be used: the node does not answer, so every channel is unknown.";
-  if (!view.offersCurrent) return "Nothing may be used: there is no current answer on what is on offer.";
-  const total = view.channels.length;
-  if (view.offers.length === 0) return `None of ${counted(total, "channel", "channels")} may be used now.`;
+  if (!view.current) {
+    return "Nothing may be used: the node does not answer, so every channel is unknown.";
+  }
+  if (!view.offersCurrent) {
+    return "Nothing may be used: there is no current answer on what is on offer.";
+  }
+  const all = counted(view.channels.length, "channel", "channels");
+  if (view.offers.length === 0) return `None of ${all} may be used now.`;
   const best = view.offers.slice(0, 3).map((offer) => offer.channel).join(", ");
-  return `${view.offers.length} of ${counted(total, "channel", "channels")} may be used now. Longest idle: ${best}.`;
+  return `${view.offers.length} of ${all} may be used now. Longest idle: ${best}.`;
 }
 
 function showHealth(health) {
@@ -140,7 +144,8 @@ function showHealth(health) {
       : `Whether the node is well is not known: it last said so ${waited} ago.`;
     setText(byId("health-line"), words);
     setText(byId("well-line"), words);
-    setAttribute(byId("health-line"), "data-health", healthFeed.answer === null ? "waiting" : "unknown");
+    setAttribute(byId("health-line"), "data-health",
+      healthFeed.answer === null ? "waiting" : "unknown");
     setAttribute(byId("well"), "data-past", "");
     return;
   }
@@ -162,7 +167,7 @@ function tick() {
   const ms = nowMs();
   if (ms !== null) {
     setText(byId("utc"), utcTime(ms));
-    setText(byId("local"), `${localTime(ms)} local, ${utcDay(ms)}`);
+    setText(byId("local"), `${utcDay(ms)}; ${localTime(ms)} local`);
   }
   const current = channelFeed.current();
   const late = channelFeed.ageMs() > STALE_MS;
@@ -192,9 +197,16 @@ function choose(id) {
   updateDetail(makeView(), id);
 }
 
-makeOfferRows(choose);
-byId("detail-close").addEventListener("click", () => choose(null));
-byId("refusals").open = matchMedia("(min-width: 60rem)").matches;
+function close() {
+  sheet.focus(chosen, true);
+  choose(null);
+}
+
+makeOfferRows((id) => sheet.focus(id, false));
+byId("detail-close").addEventListener("click", close);
+byId("detail").addEventListener("keydown", (event) => {
+  if (event.key === "Escape") close();
+});
 document.addEventListener("visibilitychange", () => {
   if (document.hidden) return;
   tick();

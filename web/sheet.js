@@ -6,7 +6,9 @@ import { byId, make, setAttribute, setText } from "./dom.js";
 import { bandWords, megahertz, stateOf } from "./text.js";
 
 const COLUMNS = 10;
-const STATE_NAMES = { occupied: "occupied", idle: "idle", unknown: "unknown", own: "own transmission" };
+const STATE_NAMES = {
+  occupied: "occupied", idle: "idle", unknown: "unknown", own: "own transmission",
+};
 
 export class Sheet {
   /** `onChoose` gets the id of a channel that was touched or focused, or null to close. */
@@ -16,6 +18,7 @@ export class Sheet {
     this.cells = new Map();
     this.plan = "";
     this.chosen = null;
+    this.quiet = false;
     this.root.addEventListener("click", (event) => this.choose(event));
     this.root.addEventListener("focusin", (event) => this.choose(event));
     this.root.addEventListener("keydown", (event) => this.key(event));
@@ -94,7 +97,16 @@ export class Sheet {
     }
   }
 
+  /** Leads the reader to a channel's cell; `quietly` without opening its detail. */
+  focus(id, quietly) {
+    this.quiet = quietly;
+    this.cells.get(id)?.button.focus({ preventScroll: quietly });
+    this.quiet = false;
+    if (!quietly) this.onChoose(id);
+  }
+
   choose(event) {
+    if (this.quiet) return;
     const button = event.target.closest("button.cell");
     if (button) this.onChoose(button.dataset.channel);
   }
@@ -119,7 +131,8 @@ export class Sheet {
 function destination(event, index, count) {
   const rowStart = index - (index % COLUMNS);
   const steps = {
-    ArrowLeft: index - 1, ArrowRight: index + 1, ArrowUp: index - COLUMNS, ArrowDown: index + COLUMNS,
+    ArrowLeft: index - 1, ArrowRight: index + 1,
+    ArrowUp: index - COLUMNS, ArrowDown: index + COLUMNS,
     Home: event.ctrlKey ? 0 : rowStart,
     End: event.ctrlKey ? count - 1 : Math.min(count, rowStart + COLUMNS) - 1,
   };

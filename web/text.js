@@ -2,6 +2,8 @@
 // Pure functions of their arguments. They never guess: what is not known is said to be not known.
 
 const MISSING = "not measured";
+// Between a number and its unit, so that a line never breaks there.
+const NB = "\u00a0";
 const QUARTER_MS = 15 * 60 * 1000;
 
 /** Whether a value is a number that can be shown. */
@@ -16,12 +18,17 @@ function signed(value, places) {
 
 /** A level with its reference, such as "−98.3 dBFS". */
 export function level(value, reference) {
-  return isNumber(value) ? `${signed(value, 1)} ${reference}` : MISSING;
+  return isNumber(value) ? `${signed(value, 1)}${NB}${reference}` : MISSING;
+}
+
+/** The end of a level axis: whole decibels without the unit. */
+export function tens(value) {
+  return signed(value, 0);
 }
 
 /** A difference of levels, without its sign: the sentence says which way. */
 export function decibels(value) {
-  return isNumber(value) ? `${Math.abs(value).toFixed(1)} dB` : MISSING;
+  return isNumber(value) ? `${Math.abs(value).toFixed(1)}${NB}dB` : MISSING;
 }
 
 /** A frequency in MHz without the unit: four places, or six where the raster needs them. */
@@ -32,34 +39,34 @@ export function megahertz(hz) {
 
 /** A bandwidth, such as "25 kHz" or "6.25 kHz". */
 export function kilohertz(hz) {
-  return isNumber(hz) ? `${Number((hz / 1e3).toFixed(3))} kHz` : MISSING;
+  return isNumber(hz) ? `${Number((hz / 1e3).toFixed(3))}${NB}kHz` : MISSING;
 }
 
 /** A duration [s] in its two leading units, such as "6 min 12 s". */
 export function duration(seconds) {
   if (!isNumber(seconds)) return "an unknown time";
   const s = Math.max(0, seconds);
-  if (s < 9.95) return `${s.toFixed(1)} s`;
-  const whole = Math.round(s);
-  if (whole < 60) return `${whole} s`;
-  if (whole < 3600) return `${Math.floor(whole / 60)} min ${whole % 60} s`;
-  const minutes = Math.floor(whole / 60);
-  if (minutes < 24 * 60) return `${Math.floor(minutes / 60)} h ${minutes % 60} min`;
-  return `${Math.floor(minutes / 1440)} d ${Math.floor((minutes % 1440) / 60)} h`;
+  if (s < 9.95) return `${s.toFixed(1)}${NB}s`;
+  const rounded = Math.round(s);
+  if (rounded < 60) return `${rounded}${NB}s`;
+  if (rounded < 3600) return `${Math.floor(rounded / 60)}${NB}min ${rounded % 60}${NB}s`;
+  const minutes = Math.floor(rounded / 60);
+  if (minutes < 24 * 60) return `${Math.floor(minutes / 60)}${NB}h ${minutes % 60}${NB}min`;
+  return `${Math.floor(minutes / 1440)}${NB}d ${Math.floor((minutes % 1440) / 60)}${NB}h`;
 }
 
 /** A wait [ms] in whole seconds and up, such as "4 s": for counting while one looks on. */
 export function wait(ms) {
   const seconds = Math.floor(ms / 1000);
-  return seconds < 10 ? `${seconds} s` : duration(seconds);
+  return seconds < 10 ? `${seconds}${NB}s` : duration(seconds);
 }
 
 /** A share from 0 to 1 as per cent. A little is never rounded to none, nor nearly all to all. */
 export function percent(share) {
   if (!isNumber(share)) return "–";
-  if (share > 0 && share < 0.01) return "< 1 %";
-  if (share < 1 && share > 0.99) return "> 99 %";
-  return `${Math.round(share * 100)} %`;
+  if (share > 0 && share < 0.01) return `<${NB}1${NB}%`;
+  if (share < 1 && share > 0.99) return `>${NB}99${NB}%`;
+  return `${Math.round(share * 100)}${NB}%`;
 }
 
 /** A whole number in groups of three, such as "12 345". */
@@ -85,7 +92,7 @@ export function bytes(value) {
     size /= 1000;
     unit += 1;
   }
-  return `${unit === 0 ? whole(size) : size.toFixed(size < 99.95 ? 1 : 0)} ${units[unit]}`;
+  return `${unit === 0 ? whole(size) : size.toFixed(size < 99.95 ? 1 : 0)}${NB}${units[unit]}`;
 }
 
 /** Milliseconds since the epoch of an RFC 3339 stamp, or null. */
@@ -152,15 +159,22 @@ const REASONS = {
   protected: ["protected", () =>
     "The plan keeps it for its first users: it is never on offer."],
   check_time: ["not idle for long enough", (band) =>
-    `It has not yet been idle without a gap for the time asked before use${policy(band, "check_time_s")}.`],
+    `It has not yet been idle without a gap for as long as asked${policy(band, "check_time_s")}.`],
   hold_off: ["hold-off", (band) =>
-    `Someone was detected here too recently; the policy waits after each detection${policy(band, "hold_off_s")}.`],
+    `Someone was detected here less than the hold-off ago${policy(band, "hold_off_s")}.`],
   occupied: ["occupied", () => "Someone is using it: energy above the threshold."],
   unknown: ["unknown", () => "The node cannot tell whether it is in use; unknown is not idle."],
 };
 
 function policy(band, key) {
-  return band && isNumber(band[key]) ? ` (${duration(band[key])})` : "";
+  return band && isNumber(band[key]) ? ` (${setting(band[key])})` : "";
+}
+
+/** A duration [s] as somebody would set it: "2 s", "0.5 s", "5 min". */
+function setting(seconds) {
+  const minutes = seconds / 60;
+  return minutes >= 1 && Number.isInteger(minutes) ? `${minutes}${NB}min`
+    : `${Number(seconds.toFixed(3))}${NB}s`;
 }
 
 /** The short name of a reason code. */
@@ -183,7 +197,9 @@ export function stateOf(channel, current) {
   return channel.verdict === "idle" || channel.verdict === "occupied" ? channel.verdict : "unknown";
 }
 
-const STATE_WORDS = { occupied: "Occupied", idle: "Idle", unknown: "Unknown", own: "Own transmission" };
+const STATE_WORDS = {
+  occupied: "Occupied", idle: "Idle", unknown: "Unknown", own: "Own transmission",
+};
 
 /** The verdict in words: what, for how long, and how sure. */
 export function verdictSentence(channel, band, reference, nowMs) {
@@ -212,10 +228,12 @@ export function healthSentence(health) {
   const problems = Array.isArray(health.problems) ? health.problems : [];
   if (health.status === "well" && problems.length === 0) {
     const age = health.detection?.last_dwell_age_s;
-    return `The node is well: newest dwell ${isNumber(age) ? `${duration(age)} ago` : "not known"}.`;
+    const newest = isNumber(age) ? `newest dwell ${duration(age)} ago` : "no dwell yet";
+    return `The node is well: ${newest}.`;
   }
   if (problems.length === 0) return "The node is impaired, and does not say why.";
-  const rest = problems.length > 1 ? ` And ${counted(problems.length - 1, "problem", "problems")} more.` : "";
+  const others = problems.length - 1;
+  const rest = others > 0 ? ` And ${counted(others, "problem", "problems")} more.` : "";
   return `The node is impaired. ${problems[0]}${rest}`;
 }
 
@@ -254,8 +272,9 @@ export function nodeWords(node, nowMs) {
   const started = instant(node.started);
   const since = started === null ? "" : ` Started ${when(started, nowMs)}.`;
   const receiver = node.receiver ?? {};
+  const covered = Number((receiver.usable_bandwidth_hz / 1e6).toFixed(3));
   const width = isNumber(receiver.usable_bandwidth_hz)
-    ? ` Covers ${Number((receiver.usable_bandwidth_hz / 1e6).toFixed(3))} MHz about ${megahertz(receiver.centre_hz)} MHz.` : "";
+    ? ` Covers ${covered}${NB}MHz about ${megahertz(receiver.centre_hz)}${NB}MHz.` : "";
   return `fallowband ${node.version}. Source: ${node.source}.${width}${since} `
     + `Configuration ${node.configuration}.`;
 }
@@ -264,7 +283,8 @@ export function nodeWords(node, nowMs) {
 export function bandWords(band, channels, reference) {
   const first = channels[0];
   const last = channels[channels.length - 1];
-  const alarm = isNumber(band.pfa) && band.pfa > 0 ? `one false alarm in ${whole(1 / band.pfa)} decisions` : "";
+  const alarm = isNumber(band.pfa) && band.pfa > 0
+    ? `one false alarm in ${whole(1 / band.pfa)} decisions` : "";
   const found = isNumber(band.pd) ? `${percent(band.pd)} found at the protection level of `
     + `${level(band.protection_level_db, reference)}` : "";
   const design = [alarm, found].filter(Boolean).join(", ");

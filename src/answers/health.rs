@@ -117,7 +117,7 @@ impl Health {
         }
         let limit_s = self.detection.late_after_s;
         match self.detection.last_dwell_age_s {
-            Some(age_s) if !(age_s < limit_s) => Some(format!(
+            Some(age_s) if reached(age_s, limit_s) => Some(format!(
                 "No dwell was decided for {age_s:.1} s (limit {limit_s:.1} s): verdicts are stale \
                  and served as unknown."
             )),
@@ -138,7 +138,7 @@ impl CaptureHealth {
                     .to_string(),
             ),
             (CaptureState::Running, None) => Some("No sample has arrived yet.".to_string()),
-            (CaptureState::Running, Some(age_s)) if !(age_s < SILENT_AFTER_S) => {
+            (CaptureState::Running, Some(age_s)) if reached(age_s, SILENT_AFTER_S) => {
                 Some(format!("No sample has arrived for {age_s:.1} s."))
             }
             (CaptureState::Running, Some(_)) => None,
@@ -161,7 +161,7 @@ impl HistoryHealth {
             (HistoryState::Stopped, _) => {
                 Some("History is not being written; answers about now still hold.".to_string())
             }
-            (HistoryState::Writing, Some(age_s)) if !(age_s < COMMIT_LATE_AFTER_S) => {
+            (HistoryState::Writing, Some(age_s)) if reached(age_s, COMMIT_LATE_AFTER_S) => {
                 Some(format!(
                     "History was last committed {age_s:.0} s ago (failed commits since the \
                      start: {}).",
@@ -175,6 +175,11 @@ impl HistoryHealth {
             (HistoryState::Writing, _) => None,
         }
     }
+}
+
+/// Whether an age has reached a limit [s]; an age that is no number has, since nothing is known.
+fn reached(age_s: f64, limit_s: f64) -> bool {
+    age_s >= limit_s || age_s.is_nan()
 }
 
 /// Serialises an age rounded to 0.001 s; null for none and for what is no number.

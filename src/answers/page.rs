@@ -17,11 +17,24 @@ struct File {
 }
 
 const HTML: &str = "text/html; charset=utf-8";
+const CSS: &str = "text/css; charset=utf-8";
+const SCRIPT: &str = "text/javascript; charset=utf-8";
+const DRAWING: &str = "image/svg+xml";
 
 /// Every file of the page.
 #[rustfmt::skip]
 const FILES: &[File] = &[
     File { path: "/", media_type: HTML, text: include_str!("../../web/index.html") },
+    File { path: "/detail.js", media_type: SCRIPT, text: include_str!("../../web/detail.js") },
+    File { path: "/dom.js", media_type: SCRIPT, text: include_str!("../../web/dom.js") },
+    File { path: "/feed.js", media_type: SCRIPT, text: include_str!("../../web/feed.js") },
+    File { path: "/icon.svg", media_type: DRAWING, text: include_str!("../../web/icon.svg") },
+    File { path: "/lately.js", media_type: SCRIPT, text: include_str!("../../web/lately.js") },
+    File { path: "/page.css", media_type: CSS, text: include_str!("../../web/page.css") },
+    File { path: "/page.js", media_type: SCRIPT, text: include_str!("../../web/page.js") },
+    File { path: "/record.js", media_type: SCRIPT, text: include_str!("../../web/record.js") },
+    File { path: "/sheet.js", media_type: SCRIPT, text: include_str!("../../web/sheet.js") },
+    File { path: "/text.js", media_type: SCRIPT, text: include_str!("../../web/text.js") },
 ];
 
 /// Routes to the page's files. They may be kept by a browser and are asked for anew each time, so

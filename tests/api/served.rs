@@ -21,6 +21,30 @@ async fn the_page_is_served_with_headers_that_keep_it_to_itself() {
 }
 
 #[tokio::test]
+async fn every_file_of_the_page_is_served_as_it_stands() {
+    let folder = std::path::Path::new(env!("CARGO_MANIFEST_DIR")).join("web");
+    let service = service();
+    let mut count = 0;
+    for entry in std::fs::read_dir(folder).unwrap() {
+        let file = entry.unwrap().path();
+        let media_type = match file.extension().and_then(|extension| extension.to_str()) {
+            Some("html") => "text/html; charset=utf-8",
+            Some("css") => "text/css; charset=utf-8",
+            Some("js") => "text/javascript; charset=utf-8",
+            Some("svg") => "image/svg+xml",
+            _ => continue,
+        };
+        let name = file.file_name().unwrap().to_str().unwrap();
+        let answer = get(&service, &format!("/{}", name.trim_start_matches("index.html"))).await;
+        assert_eq!(answer.status, StatusCode::OK, "{name}");
+        assert_eq!(answer.header("content-type"), media_type, "{name}");
+        assert_eq!(answer.text, std::fs::read_to_string(&file).unwrap(), "{name}");
+        count += 1;
+    }
+    assert!(count > 1, "the page has a script at least");
+}
+
+#[tokio::test]
 async fn every_answer_carries_the_same_guards() {
     for path in ["/", "/v1/health", "/nowhere"] {
         let answer = get(&service(), path).await;

@@ -23,19 +23,19 @@ use fallowband::detection::verdict::{DwellReport, Levels, Reason, Reasons, State
 use fallowband::detection::window::Window;
 
 /// 2026-03-01T06:00:00Z, when the invented node starts; its monotonic clock then stands at 1000 s.
-pub const START: Stamp =
+pub(crate) const START: Stamp =
     Stamp { utc: Utc(1_772_344_800 * NANOS_PER_SECOND), monotonic_ns: 1000 * NANOS_PER_SECOND };
 
-pub const MILLISECOND_NS: i64 = NANOS_PER_SECOND / 1000;
+pub(crate) const MILLISECOND_NS: i64 = NANOS_PER_SECOND / 1000;
 
 /// Dwells of 0.5 s follow each other without a gap.
-pub const DWELL_NS: i64 = 500 * MILLISECOND_NS;
+pub(crate) const DWELL_NS: i64 = 500 * MILLISECOND_NS;
 
-pub fn at(millis: i64) -> Stamp {
+pub(crate) fn at(millis: i64) -> Stamp {
     START.plus_nanos(millis * MILLISECOND_NS)
 }
 
-pub fn band(id: &str, max_age_s: i64) -> Band {
+pub(crate) fn band(id: &str, max_age_s: i64) -> Band {
     Band {
         id: id.to_string(),
         pfa: 1e-4,
@@ -52,7 +52,7 @@ pub fn band(id: &str, max_age_s: i64) -> Band {
 }
 
 /// S01 to S04 are 12.5 kHz wide, S04 is protected; K01 of a second band is 25 kHz wide.
-pub fn plan() -> Plan {
+pub(crate) fn plan() -> Plan {
     let channel = |id: &str, band_index, centre_hz, bandwidth_hz| Channel {
         id: id.to_string(),
         band_index,
@@ -81,7 +81,7 @@ pub fn plan() -> Plan {
     }
 }
 
-pub fn verdict(channel_index: usize, state: State, reasons: Reasons) -> Verdict {
+pub(crate) fn verdict(channel_index: usize, state: State, reasons: Reasons) -> Verdict {
     let power_db = if state == State::Occupied { -70.004 } else { -101.258 };
     let levels =
         Levels { power_db, floor_db: -101.3, threshold_db: -98.111, sensitivity_db: -97.0 };
@@ -90,7 +90,7 @@ pub fn verdict(channel_index: usize, state: State, reasons: Reasons) -> Verdict 
 
 /// Five seconds of dwells, the last one ending at [`END_MS`]: S01 and the protected S04 idle, S02
 /// occupied until the last two dwells, S03 insensitive, K01 idle for the last dwell only.
-pub fn scripted(sequence: u64) -> DwellReport {
+pub(crate) fn scripted(sequence: u64) -> DwellReport {
     let s02 = if sequence < 8 { State::Occupied } else { State::Idle };
     let k01 = if sequence < 9 { State::Occupied } else { State::Idle };
     DwellReport {
@@ -110,9 +110,9 @@ pub fn scripted(sequence: u64) -> DwellReport {
 }
 
 /// When the last of the scripted dwells ends, after [`START`] [ms].
-pub const END_MS: i64 = 5000;
+pub(crate) const END_MS: i64 = 5000;
 
-pub fn well() -> Health {
+pub(crate) fn well() -> Health {
     Health {
         capture: CaptureHealth {
             state: CaptureState::Running,
@@ -135,7 +135,7 @@ pub fn well() -> Health {
 }
 
 /// The state after `dwells` scripted dwells, as seen at `now`.
-pub fn state(dwells: u64, now: Stamp) -> AppState {
+pub(crate) fn state(dwells: u64, now: Stamp) -> AppState {
     let plan = plan();
     let mut standing = Standing::new(&plan);
     let mut newest = None;
@@ -164,27 +164,32 @@ pub fn state(dwells: u64, now: Stamp) -> AppState {
 }
 
 /// The service a quarter of a second after the last scripted dwell.
-pub fn service() -> Router {
+pub(crate) fn service() -> Router {
     app(state(10, at(END_MS + 250)))
 }
 
-pub struct Answer {
-    pub status: StatusCode,
-    pub headers: HeaderMap,
-    pub text: String,
+pub(crate) struct Answer {
+    pub(crate) status: StatusCode,
+    pub(crate) headers: HeaderMap,
+    pub(crate) text: String,
 }
 
 impl Answer {
-    pub fn header(&self, name: &str) -> &str {
+    pub(crate) fn header(&self, name: &str) -> &str {
         self.headers.get(name).map_or("", |value| value.to_str().unwrap())
     }
 
-    pub fn json(&self) -> Value {
+    pub(crate) fn json(&self) -> Value {
         serde_json::from_str(&self.text).unwrap()
     }
 }
 
-pub async fn send(service: &Router, method: Method, uri: &str, body: &'static str) -> Answer {
+pub(crate) async fn send(
+    service: &Router,
+    method: Method,
+    uri: &str,
+    body: &'static str,
+) -> Answer {
     let request = Request::builder().method(method).uri(uri).body(Body::from(body)).unwrap();
     let response = service.clone().oneshot(request).await.unwrap();
     let (parts, body) = response.into_parts();
@@ -192,12 +197,12 @@ pub async fn send(service: &Router, method: Method, uri: &str, body: &'static st
     Answer { status: parts.status, headers: parts.headers, text }
 }
 
-pub async fn get(service: &Router, uri: &str) -> Answer {
+pub(crate) async fn get(service: &Router, uri: &str) -> Answer {
     send(service, Method::GET, uri, "").await
 }
 
 /// The answer's JSON, having checked that all is well with it.
-pub async fn get_json(service: &Router, uri: &str) -> Value {
+pub(crate) async fn get_json(service: &Router, uri: &str) -> Value {
     let answer = get(service, uri).await;
     assert_eq!(answer.status, StatusCode::OK, "{uri}: {}", answer.text);
     assert_eq!(answer.header("content-type"), "application/json", "{uri}");
@@ -206,7 +211,7 @@ pub async fn get_json(service: &Router, uri: &str) -> Value {
 }
 
 /// The problem's JSON, having checked that it is one.
-pub async fn get_problem(service: &Router, uri: &str, status: u16) -> Value {
+pub(crate) async fn get_problem(service: &Router, uri: &str, status: u16) -> Value {
     let answer = get(service, uri).await;
     assert_eq!(answer.status.as_u16(), status, "{uri}: {}", answer.text);
     assert_eq!(answer.header("content-type"), "application/problem+json", "{uri}");
