@@ -1,2 +1,7 @@
-//! The door of the house.
-fn main() {}
+//! The door of the house: everything behind it is in the library.
+
+use std::process::ExitCode;
+
+fn main() -> ExitCode {
+    fallowband::command::main()
+}

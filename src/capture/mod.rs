@@ -11,6 +11,7 @@ mod error;
 pub mod paced;
 pub mod queue;
 pub mod recording;
+pub mod scene;
 
 pub use error::CaptureError;
 

@@ -133,6 +133,11 @@ impl Configuration {
         Configuration::parse(&text, &name, base)
     }
 
+    /// The centre frequency that the file gives [Hz]; `None` leaves it to the source.
+    pub fn centre_hz(&self) -> Option<f64> {
+        self.receiver.centre_hz
+    }
+
     /// Checks a file's text. `name` is the file as errors name it; relative paths in the text are
     /// taken from `base_dir`.
     ///

@@ -10,9 +10,10 @@ use serde_json::{Value, json};
 use tempfile::TempDir;
 
 /// What a user says of a recording that states no centre.
-pub(crate) const CENTRE: Told = Told { centre_hz: Some(433e6), start: None };
+pub(crate) const CENTRE: Told =
+    Told { centre_hz: Some(433e6), start: None, fallback_centre_hz: None };
 /// Nothing to say.
-pub(crate) const NOTHING: Told = Told { centre_hz: None, start: None };
+pub(crate) const NOTHING: Told = Told { centre_hz: None, start: None, fallback_centre_hz: None };
 /// 2026-03-01T12:00:00Z [s].
 pub(crate) const NOON_S: i64 = 1_772_366_400;
 /// The same as the program keeps it.

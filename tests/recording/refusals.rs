@@ -163,18 +163,18 @@ fn what_is_told_fills_what_is_not_stated_and_never_overrides() {
     let silent = Folder::new(&meta(json!([{"core:sample_start": 0}])), &[0, 0]);
     let noon = Some(NOON);
     // The same told again is no contradiction, nor is the rounding of 14.0755 * 1e6.
-    let same = Told { centre_hz: Some(14.0755 * 1e6), start: noon };
+    let same = Told { centre_hz: Some(14.0755 * 1e6), start: noon, fallback_centre_hz: None };
     assert_eq!(stated.open(same).expect("opens").centre_hz(), 14_075_500.0);
     assert_eq!(silent.open(same).expect("opens").start(), NOON);
 
     let c = "site.sigmf-meta: captures[0].core:";
     let centre_hz = Some(14_075_000.0);
     let expected = format!("{c}frequency: states 14075500.0 Hz, but --centre tells 14075000.0 Hz");
-    assert_eq!(stated.refusal(Told { centre_hz, start: None }), expected);
+    assert_eq!(stated.refusal(Told { centre_hz, start: None, fallback_centre_hz: None }), expected);
     let start = Some(Utc((NOON_S + 60) * 1_000_000_000));
     let expected =
         format!("{c}datetime: states 2026-03-01T12:00:00Z, but --start tells 2026-03-01T12:01:00Z");
-    assert_eq!(stated.refusal(Told { centre_hz: None, start }), expected);
+    assert_eq!(stated.refusal(Told { centre_hz: None, start, fallback_centre_hz: None }), expected);
     let expected = "site.sigmf-meta: states no core:frequency; tell it with --centre";
     assert_eq!(silent.refusal(NOTHING), expected);
     let start = Some(Utc(-1_000_000_000));

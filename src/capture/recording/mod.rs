@@ -28,8 +28,10 @@ const CHUNK_BYTES: usize = 64 * 1024;
 /// What the user says of a recording because the recording does not.
 #[derive(Clone, Copy, Debug, Default, PartialEq)]
 pub struct Told {
-    /// Centre frequency [Hz], finite.
+    /// Centre frequency [Hz], finite. Contradicts a recording that states another.
     pub centre_hz: Option<f64>,
+    /// Centre frequency [Hz] to take where neither the recording states nor the user tells one.
+    pub fallback_centre_hz: Option<f64>,
     /// When the first sample was taken.
     pub start: Option<Utc>,
 }
@@ -69,7 +71,7 @@ impl Recording {
             Some(name) => meta_path.with_file_name(name),
             None => with_suffix(&stem, ".sigmf-data"),
         };
-        let centre_hz = centre_hz(&meta_path, &metadata.segments, told.centre_hz)?;
+        let centre_hz = centre_hz(&meta_path, &metadata.segments, told)?;
         let start = start(&meta_path, &metadata.segments, told.start)?;
         let (file, samples_total) = open_data(&data_path, metadata.format)?;
         let stretches = stretches(
@@ -226,15 +228,16 @@ fn open_data(path: &Path, format: SampleFormat) -> Result<(File, u64), CaptureEr
 }
 
 /// The one centre frequency of the recording, stated or told.
-fn centre_hz(path: &Path, segments: &[Segment], told: Option<f64>) -> Result<f64, CaptureError> {
+fn centre_hz(path: &Path, segments: &[Segment], told: Told) -> Result<f64, CaptureError> {
     let fault = |index: usize, problem| {
         let key = format!("captures[{index}].core:frequency");
         Err(CaptureError::Value { path: path.to_owned(), key, problem })
     };
-    let centre_hz = match (segments[0].frequency_hz, told) {
+    let centre_hz = match (segments[0].frequency_hz, told.centre_hz) {
         (None, None) => {
             let problem = "states no core:frequency; tell it with --centre".to_owned();
-            return Err(CaptureError::Unusable { path: path.to_owned(), problem });
+            let missing = CaptureError::Unusable { path: path.to_owned(), problem };
+            told.fallback_centre_hz.ok_or(missing)?
         }
         (Some(stated), Some(told)) if !same_frequency(stated, told) => {
             return fault(0, format!("states {stated:?} Hz, but --centre tells {told:?} Hz"));
