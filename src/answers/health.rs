@@ -148,8 +148,8 @@ impl CaptureHealth {
     fn loss(&self) -> Option<String> {
         let age_s = self.last_loss_age_s.filter(|age_s| *age_s < LOSS_REMEMBERED_S)?;
         Some(format!(
-            "Samples were lost {age_s:.0} s ago (since the start: lost samples {}, gaps {}, dropped \
-             blocks {}).",
+            "Samples were lost {age_s:.0} s ago (since the start: lost samples {}, gaps {}, \
+             dropped blocks {}).",
             self.lost_samples, self.gaps, self.blocks_dropped
         ))
     }

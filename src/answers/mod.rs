@@ -153,7 +153,7 @@ async fn bound_and_label(State(limit): State<Duration>, request: Request, next: 
     response
 }
 
-/// Serves until `shutdown` completes, and then for at most [`SHUTDOWN_GRACE`] the requests that are
+/// Serves until `shutdown` completes, and then for at most a second the requests that are
 /// being answered. Connections that are merely kept alive are closed at once.
 pub async fn serve(
     listener: TcpListener,

@@ -130,7 +130,7 @@ pub(super) async fn offers(
     }))
 }
 
-/// The validity is cut and the age rounded up, both to whole milliseconds, so that neither flatters.
+/// The validity is cut and the age rounded up, both to milliseconds, so that neither flatters.
 fn offer_answer(plan: &Plan, offer: &Offer, now: Utc) -> OfferAnswer {
     let channel = &plan.channels[offer.channel_index];
     let band = plan.band_of(channel);

@@ -1,4 +1,4 @@
-//! Query strings, read strictly: a key that is not known, or given twice, is an error and not a guess.
+//! Query strings, read strictly: a key that is unknown, or given twice, is an error, not a guess.
 
 use std::str::FromStr;
 

@@ -92,7 +92,8 @@ async fn occupancy_comes_by_quarter_hour_and_ends_now() {
     let service = serve_history(folder.path(), morning(), 40 * MINUTE_MS);
     let answer = get_json(
         &service,
-        "/v1/occupancy?channel=S01&resolution=15m&from=2026-03-01T06:00:00Z&to=2026-03-02T00:00:00Z",
+        "/v1/occupancy?channel=S01&resolution=15m&from=2026-03-01T06:00:00Z\
+         &to=2026-03-02T00:00:00Z",
     )
     .await;
     assert_eq!(
