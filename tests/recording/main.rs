@@ -76,6 +76,19 @@ fn every_readable_datatype_comes_through_with_its_scale_and_its_rails() {
 }
 
 #[test]
+fn clipped_samples_are_counted_for_each_block_by_itself() {
+    let data = [127_i8, 0, 0, 127, 1, 1, 0, 0, -128, -128].map(|value| value as u8);
+    let folder = Folder::new(&meta(json!([])), &data);
+    let mut recording = folder.open(CENTRE).expect("opens");
+    let mut block = empty_block(2);
+    let mut clipped = Vec::new();
+    while recording.read(&mut block, 2).expect("reads") {
+        clipped.push(block.clipped);
+    }
+    assert_eq!(clipped, [2, 0, 1]);
+}
+
+#[test]
 fn a_recording_opens_by_either_file_or_by_its_bare_name() {
     let folder = Folder::new(&meta_with("core:dataset", json!("other.bin")), &[]);
     fs::write(folder.path("other.bin"), [1, 2]).expect("written");

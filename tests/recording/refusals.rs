@@ -157,24 +157,25 @@ fn segments_that_contradict_are_refused_with_one_clear_line() {
 
 #[test]
 fn what_is_told_fills_what_is_not_stated_and_never_overrides() {
-    let captures = json!([{"core:sample_start": 0, "core:frequency": 14_075_500.0,
+    let captures = json!([{"core:sample_start": 0, "core:frequency": 1_001_000.0,
                            "core:datetime": "2026-03-01T12:00:00Z"}]);
     let stated = Folder::new(&meta(captures), &[0, 0]);
     let silent = Folder::new(&meta(json!([{"core:sample_start": 0}])), &[0, 0]);
     let noon = Some(NOON);
-    // The same told again is no contradiction, nor is the rounding of 14.0755 * 1e6.
-    let same = Told { centre_hz: Some(14.0755 * 1e6), start: noon, fallback_centre_hz: None };
-    assert_eq!(stated.open(same).expect("opens").centre_hz(), 14_075_500.0);
+    // The same told again is no contradiction, nor is rounding: 1.001 * 1e6 is not 1001000.
+    assert_ne!(1.001 * 1e6, 1_001_000.0);
+    let same = Told { centre_hz: Some(1.001 * 1e6), start: noon, ..NOTHING };
+    assert_eq!(stated.open(same).expect("opens").centre_hz(), 1_001_000.0);
     assert_eq!(silent.open(same).expect("opens").start(), NOON);
 
     let c = "site.sigmf-meta: captures[0].core:";
-    let centre_hz = Some(14_075_000.0);
-    let expected = format!("{c}frequency: states 14075500.0 Hz, but --centre tells 14075000.0 Hz");
-    assert_eq!(stated.refusal(Told { centre_hz, start: None, fallback_centre_hz: None }), expected);
+    let centre_hz = Some(1_001_000.1);
+    let expected = format!("{c}frequency: states 1001000.0 Hz, but --centre tells 1001000.1 Hz");
+    assert_eq!(stated.refusal(Told { centre_hz, ..NOTHING }), expected);
     let start = Some(Utc((NOON_S + 60) * 1_000_000_000));
     let expected =
         format!("{c}datetime: states 2026-03-01T12:00:00Z, but --start tells 2026-03-01T12:01:00Z");
-    assert_eq!(stated.refusal(Told { centre_hz: None, start, fallback_centre_hz: None }), expected);
+    assert_eq!(stated.refusal(Told { start, ..NOTHING }), expected);
     let expected = "site.sigmf-meta: states no core:frequency; tell it with --centre";
     assert_eq!(silent.refusal(NOTHING), expected);
     let start = Some(Utc(-1_000_000_000));

@@ -257,7 +257,7 @@ fn centre_hz(path: &Path, segments: &[Segment], told: Told) -> Result<f64, Captu
     Ok(centre_hz)
 }
 
-/// Equal but for the rounding of decimal notations, such as `14.0755MHz` for 14075500.
+/// Equal but for rounding: the double 1.001 times 1e6 is 1000999.9999999999.
 fn same_frequency(a_hz: f64, b_hz: f64) -> bool {
     (a_hz - b_hz).abs() <= 1e-9 * a_hz.abs()
 }

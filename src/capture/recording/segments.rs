@@ -151,3 +151,36 @@ impl Joint<'_> {
         })
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// Whether a second segment after 1000 samples at 10 MS/s, dated `deviation_ns` off, has a gap.
+    fn gap(deviation_ns: i64) -> Result<bool, CaptureError> {
+        let segment = |sample_start: u64, datetime| Segment {
+            sample_start,
+            global_index: None,
+            frequency_hz: None,
+            datetime: Some(Utc(datetime)),
+        };
+        let segments = [segment(0, 5_000), segment(1000, 105_000 + deviation_ns)];
+        let stretches = stretches(Path::new("x"), &segments, 10e6, 2000, Utc(5_000))?;
+        let starts: Vec<i64> = stretches.iter().map(|stretch| stretch.start.0).collect();
+        match starts[..] {
+            [5_000] => Ok(false),
+            [5_000, second] if second == 105_000 + deviation_ns => Ok(true),
+            _ => panic!("{starts:?}"),
+        }
+    }
+
+    #[test]
+    fn half_a_sample_counts_only_where_it_is_longer_than_a_microsecond() {
+        // Half a sample is 50 ns here, less than the digits of most dates can tell.
+        assert!(!gap(0).expect("follows on"));
+        assert!(!gap(1000).expect("follows on"));
+        assert!(gap(1001).expect("a gap"));
+        assert!(!gap(-1000).expect("follows on"));
+        assert!(gap(-1001).is_err());
+    }
+}
