@@ -46,26 +46,40 @@ export class Feed {
     this.asking = true;
     const asked = moment();
     try {
-      const response = await fetch(this.path(), {
-        cache: "no-store", headers: { accept: "application/json" },
-        signal: AbortSignal.timeout(TIMEOUT_MS),
-      });
-      if (response.ok) this.take(await response.json(), asked);
-    } catch {
-      // No answer is an ordinary event here: the age grows, and the page says so.
+      this.take(await question(this.path()), asked);
+    } finally {
+      this.asking = false;
+      const wait = Math.max(100, this.periodMs - since(asked));
+      this.timer = setTimeout(() => this.ask(), wait);
     }
-    this.asking = false;
-    const wait = Math.max(100, this.periodMs - since(asked));
-    this.timer = setTimeout(() => this.ask(), wait);
   }
 
   take(answer, asked) {
     if (typeof answer !== "object" || answer === null) return;
     const standsStill = answer.now !== undefined && this.answer?.now === answer.now;
     if (standsStill) return;
-    this.answer = answer;
-    this.asked = asked;
-    this.onAnswer(answer);
+    const before = { answer: this.answer, asked: this.asked };
+    Object.assign(this, { answer, asked });
+    try {
+      this.onAnswer(answer);
+    } catch (fault) {
+      // What could not be shown was not answered: the old picture must not pass for the new one.
+      Object.assign(this, before);
+      throw fault;
+    }
+  }
+}
+
+/** The node's answer; null when none came, an ordinary event: the age grows and the page tells. */
+async function question(path) {
+  try {
+    const response = await fetch(path, {
+      cache: "no-store", headers: { accept: "application/json" },
+      signal: AbortSignal.timeout(TIMEOUT_MS),
+    });
+    return response.ok ? await response.json() : null;
+  } catch {
+    return null;
   }
 }
 

@@ -137,11 +137,16 @@ function headline(view) {
   return `${view.offers.length} of ${all} may be used now. Longest idle: ${best}.`;
 }
 
+/** Whether the last word on health still stands: a node that says nothing at all is not "well". */
+function healthCurrent() {
+  return healthFeed.current() && (healthFeed.ageMs() <= STALE_MS || channelFeed.current());
+}
+
 function showHealth(health) {
-  if (!healthFeed.current()) {
+  if (!healthCurrent()) {
     const waited = wait(healthFeed.ageMs());
     const words = healthFeed.answer === null ? "The node has not answered yet."
-      : `Whether the node is well is not known: it last said so ${waited} ago.`;
+      : `Whether the node is well is not known: the last word is ${waited} old.`;
     setText(byId("health-line"), words);
     setText(byId("well-line"), words);
     setAttribute(byId("health-line"), "data-health",
@@ -181,7 +186,7 @@ function tick() {
       : `The node has not answered for ${waited}. Nothing below is current.`);
   }
   if (!current || !offerFeed.current()) showNow();
-  if (!healthFeed.current()) showHealth();
+  if (!healthCurrent()) showHealth(null);
   if (current && !wasCurrent && channelFeed.answer !== null) {
     nodeFeed.ask();
     recordFeed.ask();
