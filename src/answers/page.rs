@@ -30,6 +30,7 @@ const FILES: &[File] = &[
     File { path: "/feed.js", media_type: SCRIPT, text: include_str!("../../web/feed.js") },
     File { path: "/icon.svg", media_type: DRAWING, text: include_str!("../../web/icon.svg") },
     File { path: "/lately.js", media_type: SCRIPT, text: include_str!("../../web/lately.js") },
+    File { path: "/media.css", media_type: CSS, text: include_str!("../../web/media.css") },
     File { path: "/page.css", media_type: CSS, text: include_str!("../../web/page.css") },
     File { path: "/page.js", media_type: SCRIPT, text: include_str!("../../web/page.js") },
     File { path: "/record.js", media_type: SCRIPT, text: include_str!("../../web/record.js") },
