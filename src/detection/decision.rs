@@ -88,8 +88,8 @@ impl Decision {
 
     /// The verdicts of one dwell, appended to `verdicts`.
     ///
-    /// `spectrum` is the dwell's averaged power per bin by rising frequency; `energies` and `fit` are
-    /// scratch, reused from dwell to dwell.
+    /// `spectrum` is the dwell's averaged power per bin by rising frequency; `scratch` is
+    /// reused from dwell to dwell.
     pub fn decide(
         &self,
         layout: &Layout,
@@ -98,7 +98,7 @@ impl Decision {
         scratch: &mut Scratch,
         verdicts: &mut Vec<Verdict>,
     ) {
-        let energies = &mut scratch.energies;
+        let Scratch { energies, fit, .. } = scratch;
         energies.clear();
         energies.extend(layout.references.iter().map(|cell| cell.span.mean_power(spectrum)));
         let mut reasons = integrity.reasons;
@@ -108,13 +108,14 @@ impl Decision {
             reasons.insert(Reason::NoNoise);
         }
         let measurable = !reasons.contains(Reason::NotFinite) && !reasons.contains(Reason::NoNoise);
-        let fitted = measurable && self.model.fit(energies, &mut scratch.fit);
+        let fitted = measurable && self.model.fit(energies, fit);
         if measurable && !fitted {
             reasons.insert(Reason::NoReference);
         }
         for (index, channel) in layout.channels.iter().enumerate() {
             let floor = if fitted {
-                self.model.at(&scratch.fit, channel.position, channel.own_reference)
+                let Scratch { energies, fit, spare } = scratch;
+                self.model.at(fit, energies, channel.position, channel.own_reference, spare)
             } else {
                 None
             };
@@ -122,7 +123,7 @@ impl Decision {
             if fitted && floor.is_none() {
                 reasons.insert(Reason::NoReference);
             }
-            let power = energies[channel.own_reference];
+            let power = scratch.energies[channel.own_reference];
             verdicts.push(self.verdict(index, channel, power, floor, reasons));
         }
     }
@@ -168,6 +169,7 @@ impl Decision {
 pub struct Scratch {
     energies: Vec<f64>,
     fit: FloorFit,
+    spare: FloorFit,
 }
 
 /// A power ratio in decibels.

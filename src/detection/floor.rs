@@ -22,6 +22,9 @@ type Information = [[f64; TERMS_MAX]; TERMS_MAX];
 /// Excision ends when the set of kept cells no longer changes, or after this many rounds.
 const ROUNDS_MAX: usize = 30;
 
+/// A cell with a larger share than this of the fit at its own place is taken out by a new fit.
+const LEVERAGE_MAX: f64 = 0.1;
+
 /// Most groups of neighbouring cells that the first guess is taken from.
 const GROUPS_MAX: usize = 8;
 
@@ -89,7 +92,7 @@ impl FloorModel {
             FloorTrend::Slope => 2,
             FloorTrend::Curve => 3,
         };
-        let count = (cells.len() / 8).clamp(terms.min(2), GROUPS_MAX).min(cells.len());
+        let count = (cells.len() / 8).clamp(terms.min(2), GROUPS_MAX).min(cells.len().max(1));
         let groups: Vec<(usize, usize)> =
             (0..count).map(|g| (g * cells.len() / count, (g + 1) * cells.len() / count)).collect();
         let group_size = |index: usize| {
@@ -127,24 +130,31 @@ impl FloorModel {
     }
 
     /// Fits the floor to one dwell's mean power per bin of every cell. Returns whether enough cells
-    /// are left to tell it: two more than the trend has terms.
+    /// are left to tell it: as many as the trend has terms.
+    ///
+    /// Few cells are no danger: a signal in a cell can only lift the floor, so `occupied` is claimed
+    /// against too high a floor, and `idle` only where the sensitivity over that same floor still
+    /// reaches the protection level. The estimate's variance enters both.
     ///
     /// # Panics
     /// If there is not one positive, finite energy per cell.
     pub fn fit(&self, energies: &[f64], fit: &mut FloorFit) -> bool {
+        self.fit_without(None, energies, fit)
+    }
+
+    /// As [`FloorModel::fit`], as if the cell `absent` did not exist.
+    fn fit_without(&self, absent: Option<usize>, energies: &[f64], fit: &mut FloorFit) -> bool {
         assert_eq!(energies.len(), self.cells.len(), "an energy of every cell");
         assert!(energies.iter().all(|e| *e > 0.0 && e.is_finite()), "energies are positive");
-        if self.cells.len() < self.terms + 2 {
-            return false;
-        }
         fit.kept.clear();
         fit.kept.resize(self.cells.len(), true);
         fit.ratios.clear();
         fit.ratios.resize(self.cells.len(), 1.0);
-        fit.coefficients = self.first_guess(energies);
+        let Some(guess) = self.first_guess(absent, energies) else { return false };
+        fit.coefficients = guess;
         for _ in 0..ROUNDS_MAX {
-            let changed = self.choose(energies, fit);
-            if fit.kept.iter().filter(|kept| **kept).count() < self.terms + 2 {
+            let changed = self.choose(absent, energies, fit);
+            if fit.kept.iter().filter(|kept| **kept).count() < self.terms {
                 return false;
             }
             if !self.solve(energies, fit) {
@@ -159,18 +169,26 @@ impl FloorModel {
 
     /// A line through the lowest cell of each group, robust against groups that are full: the median
     /// of the slopes between any two groups (Theil 1950, Sen 1968), then the median of what is left.
-    fn first_guess(&self, energies: &[f64]) -> Coefficients {
+    fn first_guess(&self, absent: Option<usize>, energies: &[f64]) -> Option<Coefficients> {
         let mut points = [(0.0, 0.0); GROUPS_MAX];
-        let points = &mut points[..self.groups.len()];
-        for (point, &(first, end)) in points.iter_mut().zip(&self.groups) {
+        let mut count = 0;
+        for &(first, end) in &self.groups {
             let lowest = (first..end)
+                .filter(|i| Some(*i) != absent)
                 .map(|i| (self.cells[i].basis[1], (energies[i] / self.cells[i].lowest_ratio).ln()))
                 .min_by(|a, b| a.1.total_cmp(&b.1));
-            *point = lowest.expect("groups are not empty");
+            if let Some(lowest) = lowest {
+                points[count] = lowest;
+                count += 1;
+            }
         }
+        if count == 0 {
+            return None;
+        }
+        let points = &points[..count];
         let mut coefficients = [0.0; TERMS_MAX];
         let mut values = [0.0; GROUPS_MAX * (GROUPS_MAX - 1) / 2];
-        if self.terms > 1 {
+        if self.terms > 1 && points.len() > 1 {
             let mut count = 0;
             for (j, b) in points.iter().enumerate() {
                 for a in &points[..j] {
@@ -184,15 +202,16 @@ impl FloorModel {
             *value = y - coefficients[1] * x;
         }
         coefficients[0] = median(&mut values[..points.len()]);
-        coefficients
+        Some(coefficients)
     }
 
     /// Keeps the cells whose energy lies under their threshold; tells whether that changed anything.
-    fn choose(&self, energies: &[f64], fit: &mut FloorFit) -> bool {
+    fn choose(&self, absent: Option<usize>, energies: &[f64], fit: &mut FloorFit) -> bool {
         let mut changed = false;
         for (i, cell) in self.cells.iter().enumerate() {
             let floor = dot(&fit.coefficients, &cell.basis, self.terms).exp();
-            let keep = !self.excising || energies[i] / floor < cell.ratio_max;
+            let keep =
+                Some(i) != absent && (!self.excising || energies[i] / floor < cell.ratio_max);
             changed |= keep != fit.kept[i];
             fit.kept[i] = keep;
         }
@@ -209,7 +228,7 @@ impl FloorModel {
                 let ratio = energies[i] / (floor * cell.ratio_mean);
                 fit.ratios[i] = ratio;
                 if fit.kept[i] {
-                    add_cell(&mut score, &mut information, cell, ratio - 1.0, self.terms);
+                    add_cell(&mut score, &mut information, cell, ratio - 1.0, 1.0, self.terms);
                 }
             }
             fit.information = information;
@@ -232,42 +251,67 @@ impl FloorModel {
     /// The floor at a position, without the help of the cell `own`: numerator and denominator of the
     /// ratio test are then independent. `None` where the other cells cannot tell.
     ///
-    /// One Newton step takes the cell out again; for a flat floor it is exact.
-    pub fn at(&self, fit: &FloorFit, position: f64, own: usize) -> Option<FloorAt> {
-        let here = basis(position);
+    /// One Newton step takes a cell out that carries little of the fit; for a flat floor it is exact.
+    /// Where the cell carries much, the floor is fitted anew into `spare`.
+    pub fn at(
+        &self,
+        fit: &FloorFit,
+        energies: &[f64],
+        position: f64,
+        own: usize,
+        spare: &mut FloorFit,
+    ) -> Option<FloorAt> {
+        if !fit.kept[own] {
+            return self.evaluate(fit, position, &fit.information, &[0.0; TERMS_MAX]);
+        }
+        let cell = &self.cells[own];
+        let spread = solve_positive(&fit.information, &cell.basis, self.terms)?;
+        if cell.looks * dot(&spread, &cell.basis, self.terms) > LEVERAGE_MAX {
+            let fitted = self.fit_without(Some(own), energies, spare);
+            return if fitted {
+                self.evaluate(spare, position, &spare.information, &[0.0; TERMS_MAX])
+            } else {
+                None
+            };
+        }
         let mut information = fit.information;
         let mut score = [0.0; TERMS_MAX];
-        if fit.kept[own] {
-            let cell = &self.cells[own];
-            for k in 0..self.terms {
-                score[k] = -cell.looks * cell.basis[k] * (fit.ratios[own] - 1.0);
-                for l in 0..self.terms {
-                    information[k][l] -= cell.looks * cell.basis[k] * cell.basis[l];
-                }
-            }
-        }
-        let spread = solve_positive(&information, &here, self.terms)?;
-        let step = solve_positive(&information, &score, self.terms)?;
-        let mean = dot(&fit.coefficients, &here, self.terms).exp()
-            * (1.0 + dot(&step, &here, self.terms)).max(0.1);
+        add_cell(&mut score, &mut information, cell, fit.ratios[own] - 1.0, -1.0, self.terms);
+        self.evaluate(fit, position, &information, &score)
+    }
+
+    /// The floor at a position after one Newton step along `score`.
+    fn evaluate(
+        &self,
+        fit: &FloorFit,
+        position: f64,
+        information: &Information,
+        score: &Coefficients,
+    ) -> Option<FloorAt> {
+        let here = basis(position);
+        let spread = solve_positive(information, &here, self.terms)?;
+        let step = solve_positive(information, score, self.terms)?;
+        let correction = 1.0 + dot(&step, &here, self.terms);
+        let mean = dot(&fit.coefficients, &here, self.terms).exp() * correction;
         let variance = dot(&spread, &here, self.terms);
-        (variance > 0.0).then(|| FloorAt { mean, looks: 1.0 / variance })
+        (variance > 0.0 && mean > 0.0).then(|| FloorAt { mean, looks: 1.0 / variance })
     }
 }
 
-/// Adds one cell's share to the likelihood equations.
+/// Adds one cell's share to the likelihood equations, `times` over.
 fn add_cell(
     score: &mut Coefficients,
     information: &mut Information,
     cell: &Cell,
     excess: f64,
+    times: f64,
     terms: usize,
 ) {
     for k in 0..terms {
-        let weighted = cell.looks * cell.basis[k];
+        let weighted = times * cell.looks * cell.basis[k];
         score[k] += weighted * excess;
-        for l in 0..terms {
-            information[k][l] += weighted * cell.basis[l];
+        for (value, other) in information[k][..terms].iter_mut().zip(&cell.basis) {
+            *value += weighted * other;
         }
     }
 }
