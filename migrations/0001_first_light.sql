@@ -38,8 +38,8 @@ CREATE TABLE channel (
 
 CREATE UNIQUE INDEX channel_in_force ON channel (name) WHERE valid_to_us IS NULL;
 
--- A stretch of consecutive equal verdicts. Powers are of occupied runs, in the configuration's level
--- reference; observed_us is the part of the stretch in which samples were really taken.
+-- A stretch of consecutive equal verdicts. Powers are of occupied runs, in the configuration's
+-- level reference; observed_us is the part of the stretch in which samples were really taken.
 CREATE TABLE run (
     channel       INTEGER NOT NULL REFERENCES channel (id),
     start_us      INTEGER NOT NULL,

@@ -1,9 +1,9 @@
 //! One commit: what the keeper holds goes on the record in one transaction, or not at all.
 //!
 //! Open runs are rows too: each commit moves their end in place. Quarter sums get exactly what the
-//! runs got, in the same transaction, so that the two can never disagree. Identities (configuration,
-//! channels) are written with the first commit that needs them: opening writes nothing, so that a
-//! full disk at start does not keep the node from running.
+//! runs got, in the same transaction, so that the two can never disagree. Identities
+//! (configuration, channels) are written with the first commit that needs them: opening writes
+//! nothing, so that a full disk at start does not keep the node from running.
 
 use std::path::Path;
 use std::time::Duration;
@@ -157,8 +157,8 @@ fn known(
             None => ids.superseded.push(row.get(0)?),
         }
     }
-    // By name, not by identity: a new identity takes the name's line up where the old one left it, or
-    // a clock that had gone back in between would make the same time count twice.
+    // By name, not by identity: a new identity takes the name's line up where the old one left it,
+    // or a clock that had gone back in between would make the same time count twice.
     let mut ends = connection.prepare(
         "SELECT max((SELECT end_us FROM run WHERE channel = channel.id \
          ORDER BY start_us DESC LIMIT 1)) FROM channel WHERE name = ?1",

@@ -34,7 +34,8 @@ pub(super) struct HistoryFile {
 }
 
 impl HistoryFile {
-    /// Opens the file for writing, creates it where there is none, and brings its schema up to date.
+    /// Opens the file for writing, creates it where there is none, and brings its schema up to
+    /// date.
     pub(super) fn open(
         path: &Path,
         identity: &Identity,
@@ -198,8 +199,8 @@ fn prepare(connection: &mut Connection, identity: &Identity) -> rusqlite::Result
         connection.pragma_update(None, "page_size", PAGE_BYTES as i64)?;
         connection.pragma_update(None, "application_id", APPLICATION_ID)?;
     }
-    // Readers never wait for the writer in WAL mode. FULL, not NORMAL: in our power-cut trials NORMAL
-    // lost minutes to hours of acknowledged data, FULL lost none.
+    // Readers never wait for the writer in WAL mode. FULL, not NORMAL: in our power-cut trials
+    // NORMAL lost minutes to hours of acknowledged data, FULL lost none.
     connection.pragma_update_and_check(None, "journal_mode", "WAL", |_| Ok(()))?;
     connection.pragma_update(None, "synchronous", "FULL")?;
     connection.pragma_update_and_check(None, "journal_size_limit", LOG_BYTES_MAX, |_| Ok(()))?;

@@ -6,8 +6,8 @@
 //! ```
 //!
 //! What it must never do: make the caller wait, turn `unknown` into `idle`, count a stretch twice,
-//! edit what is on the record, or touch a file that is not ours. Time comes in with the reports; the
-//! only clock read here is the monotonic one that says when the next commit is due.
+//! edit what is on the record, or touch a file that is not ours. Time comes in with the reports;
+//! the only clock read here is the monotonic one that says when the next commit is due.
 
 mod commit;
 mod error;
@@ -61,9 +61,9 @@ pub struct Options {
     /// Reports that may wait for the writer (1 or more, default 256). At ten reports a second that
     /// bridges 25 s of a stalled disk; what comes on top is dropped, counted, and unknown.
     pub queue_depth: usize,
-    /// Closed runs that are kept in memory while they cannot be written (1 or more, default 100,000:
-    /// some 12 MB, and three hours of 500 channels at 9 changes a second). Beyond it the oldest are
-    /// dropped, counted, and their time is unknown.
+    /// Closed runs that are kept in memory while they cannot be written (1 or more, default
+    /// 100,000: some 12 MB, and three hours of 500 channels at 9 changes a second). Beyond it the
+    /// oldest are dropped, counted, and their time is unknown.
     pub waiting_runs_max: usize,
     /// Size that the database may take [bytes], `None` for all that the disk has (default). At the
     /// limit the history stops and says so, as on a full disk.
@@ -95,12 +95,13 @@ pub struct History {
 impl History {
     /// Opens the history at `path`, creates it where there is none, and starts its writer thread.
     ///
-    /// A channel of `plan` continues its identity when name, band, centre and bandwidth are the same
-    /// as before; else it gets a new one, and the older history stays as it was. The time since a
-    /// channel was last recorded becomes unknown with its first report.
+    /// A channel of `plan` continues its identity when name, band, centre and bandwidth are the
+    /// same as before; else it gets a new one, and the older history stays as it was. The time
+    /// since a channel was last recorded becomes unknown with its first report.
     ///
     /// # Errors
-    /// One line with the path and what to do; a file that is refused is left byte for byte as it was.
+    /// One line with the path and what to do; a file that is refused is left byte for byte as it
+    /// was.
     pub fn open(
         path: &Path,
         identity: &Identity,

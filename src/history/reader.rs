@@ -127,10 +127,10 @@ impl Reader {
 
     /// The runs of a channel from `from` to the earlier of `to` and `now`, clipped to that range.
     ///
-    /// The list covers the range without holes: time that is not on the record, before the first run,
-    /// after the last commit, or between, is unknown and `not_observed`; so is the whole range for a
-    /// name that the history has never seen. At most `limit` runs (1 or more), fillings included.
-    /// Edges are taken in whole microseconds, rounded down.
+    /// The list covers the range without holes: time that is not on the record, before the first
+    /// run, after the last commit, or between, is unknown and `not_observed`; so is the whole range
+    /// for a name that the history has never seen. At most `limit` runs (1 or more), fillings
+    /// included. Edges are taken in whole microseconds, rounded down.
     ///
     /// # Errors
     /// When the file cannot be read.
@@ -165,8 +165,8 @@ impl Reader {
         Ok(RunList { runs, truncated })
     }
 
-    /// Sums by quarter of an hour from `from` to the earlier of `to` and `now`, for the named channels
-    /// in that order, or for all on the record by name.
+    /// Sums by quarter of an hour from `from` to the earlier of `to` and `now`, for the named
+    /// channels in that order, or for all on the record by name.
     ///
     /// The four states of each quarter add up to its length; time that is not on the record is
     /// unknown. A quarter that the range or `now` cuts is summed from its runs, not in proportion.
@@ -280,8 +280,8 @@ fn identities(snapshot: &Transaction<'_>, name: &str) -> rusqlite::Result<Vec<i6
     query.query_map([name], |row| row.get(0))?.collect()
 }
 
-/// Hands on the runs of one identity that overlap a range, clipped to it, for as long as `take` says
-/// that it wants more.
+/// Hands on the runs of one identity that overlap a range, clipped to it, for as long as `take`
+/// says that it wants more.
 fn overlapping(
     snapshot: &Transaction<'_>,
     id: i64,

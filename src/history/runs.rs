@@ -15,8 +15,8 @@ use crate::detection::verdict::{DwellReport, Reason, Reasons, State, Verdict};
 
 /// A dwell that starts within this of the record's end counts as starting right there [us].
 ///
-/// Sample clocks and UTC stamps disagree by parts per million, which is microseconds a dwell; a lost
-/// buffer is many milliseconds. One millisecond stands clear of both.
+/// Sample clocks and UTC stamps disagree by parts per million, which is microseconds a dwell; a
+/// lost buffer is many milliseconds. One millisecond stands clear of both.
 pub const TOLERANCE_US: i64 = 1_000;
 
 /// A quarter of an hour [us]; quarters begin at multiples of it in UTC.
@@ -119,11 +119,12 @@ impl Run {
         self.state == RunState::Unknown && self.reasons == Reasons::one(Reason::NotObserved)
     }
 
-    /// What the part of the run that is not yet on the record adds to each quarter: `(start, sums)`.
+    /// What the part of the run that is not yet on the record adds to each quarter: `(start,
+    /// sums)`.
     ///
-    /// Represented time is split exactly at the borders; observed time in proportion, since within a
-    /// run only its total is known. Quarters wholly inside a hole are left out: a quarter without a
-    /// row is unknown anyway, and a clock that jumps by years must not write a million of them.
+    /// Represented time is split exactly at the borders; observed time in proportion, since within
+    /// a run only its total is known. Quarters wholly inside a hole are left out: a quarter without
+    /// a row is unknown anyway, and a clock that jumps by years must not write a million of them.
     pub fn unrecorded_quarters(&self) -> impl Iterator<Item = (i64, Sums)> + use<> {
         let (start_us, observed_before_us) = self.recorded;
         let (end_us, state, hole) = (self.end_us, self.state, self.is_hole());
@@ -217,9 +218,9 @@ pub struct RunKeeper {
 }
 
 impl RunKeeper {
-    /// A keeper for channels whose record ends at `ends_us` (`None` for a channel without any) [us];
-    /// their time since then becomes unknown with their first dwell. At most `closed_max` closed
-    /// runs are held, 1 or more; beyond that the oldest are dropped and counted.
+    /// A keeper for channels whose record ends at `ends_us` (`None` for a channel without any)
+    /// [us]; their time since then becomes unknown with their first dwell. At most `closed_max`
+    /// closed runs are held, 1 or more; beyond that the oldest are dropped and counted.
     pub fn new(ends_us: &[Option<i64>], closed_max: usize) -> RunKeeper {
         assert!(closed_max > 0, "a keeper must be allowed to hold a run");
         let tracks = ends_us.iter().map(|&end_us| Track { end_us, open: None }).collect();

@@ -71,8 +71,8 @@ impl Writer {
         Ok((writer, health))
     }
 
-    /// Offers a report; returns at once. `false` when the queue is full or the writer has ended: then
-    /// the report is counted as dropped, and its time becomes unknown by itself.
+    /// Offers a report; returns at once. `false` when the queue is full or the writer has ended:
+    /// then the report is counted as dropped, and its time becomes unknown by itself.
     pub fn offer(&self, report: Arc<DwellReport>) -> bool {
         let taken = self.queue.as_ref().is_some_and(|queue| queue.try_send(report).is_ok());
         if !taken {
@@ -81,14 +81,14 @@ impl Writer {
         taken
     }
 
-    /// Changes the size that the database may take [bytes], from the next commit on. A database that
-    /// is larger already stays as it is and does not grow.
+    /// Changes the size that the database may take [bytes], from the next commit on. A database
+    /// that is larger already stays as it is and does not grow.
     pub fn limit_file_bytes(&self, bytes: Option<u64>) {
         self.file_bytes_max.store(bytes.unwrap_or(u64::MAX), Ordering::Relaxed);
     }
 
-    /// Takes what is queued, commits, and waits for the thread to end. If the last commit failed, the
-    /// health says so, and what it held is unknown.
+    /// Takes what is queued, commits, and waits for the thread to end. If the last commit failed,
+    /// the health says so, and what it held is unknown.
     pub fn close(mut self) -> HistoryHealth {
         self.finish();
         self.health.now()

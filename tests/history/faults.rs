@@ -1,4 +1,5 @@
-//! Faults of the world: power cuts, full and busy disks, files that are not ours, two nodes at once.
+//! Faults of the world: power cuts, full and busy disks, files that are not ours, two nodes at
+//! once.
 
 use std::fs;
 use std::io::{BufRead, BufReader};
@@ -236,7 +237,8 @@ fn history_stops_at_a_full_disk_says_so_and_resumes_when_there_is_room() {
     }
     let stopped = history.health.now();
     assert!(stopped.message.as_ref().unwrap().contains("no space"), "{stopped:?}");
-    // The caller notices nothing: its reports are taken as before, and what was committed is served.
+    // The caller notices nothing: its reports are taken as before, and what was committed is
+    // served.
     for _ in 0..100 {
         assert!(history.writer.offer(same(n * 1_000, 1_000, channels, state(n))));
         n += 1;
