@@ -32,7 +32,7 @@ impl Dice {
     }
 }
 
-/// How often each fault happens in one random history [percent of reports]; some are off.
+/// How often each fault happens in one random history (percent of reports); some are off.
 struct Faults {
     gap: i64,
     long_gap: i64,

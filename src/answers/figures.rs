@@ -38,7 +38,7 @@ fn millis_as_seconds(millis: i64) -> f64 {
     millis as f64 / 1000.0
 }
 
-/// Durations [ns] as seconds to 0.001, so that they still add up to their rounded total.
+/// Durations (ns) as seconds to 0.001, so that they still add up to their rounded total.
 ///
 /// Each running total is rounded and the differences are taken: every part is within 0.001 s of its
 /// exact value, none turns negative, and a part of nothing stays nothing.

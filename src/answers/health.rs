@@ -7,14 +7,14 @@ use serde::Serialize;
 
 use super::figures;
 
-/// Capture is silent when no sample came for this long [s]. Receivers deliver many blocks a second,
+/// Capture is silent when no sample came for this long (s). Receivers deliver many blocks a second,
 /// so this is far beyond any jitter. Our own choice.
 const SILENT_AFTER_S: f64 = 5.0;
 
-/// A loss of samples stays a problem for this long [s]. Our own choice.
+/// A loss of samples stays a problem for this long (s). Our own choice.
 const LOSS_REMEMBERED_S: f64 = 60.0;
 
-/// History is late when nothing was committed for this long [s]. Our own choice: many times the
+/// History is late when nothing was committed for this long (s). Our own choice: many times the
 /// interval at which the writer commits.
 const COMMIT_LATE_AFTER_S: f64 = 60.0;
 
@@ -43,10 +43,10 @@ pub struct CaptureHealth {
     pub gaps: u64,
     /// Blocks dropped since the start because detection was behind.
     pub blocks_dropped: u64,
-    /// Time since the newest sample [s]; `None` before the first.
+    /// Time since the newest sample (s); `None` before the first.
     #[serde(serialize_with = "as_seconds")]
     pub last_sample_age_s: Option<f64>,
-    /// Time since samples or blocks were last lost [s]; `None` if never. Not served as a figure.
+    /// Time since samples or blocks were last lost (s); `None` if never. Not served as a figure.
     #[serde(skip)]
     pub last_loss_age_s: Option<f64>,
 }
@@ -56,10 +56,10 @@ pub struct CaptureHealth {
 pub struct DetectionHealth {
     /// Dwells decided since the start.
     pub dwells: u64,
-    /// Time since the newest dwell's end [s]; `None` before the first.
+    /// Time since the newest dwell's end (s); `None` before the first.
     #[serde(serialize_with = "as_seconds")]
     pub last_dwell_age_s: Option<f64>,
-    /// Age from which the newest dwell is late [s]: the longest `max_age` of the plan. Not served.
+    /// Age from which the newest dwell is late (s): the longest `max_age` of the plan. Not served.
     #[serde(skip)]
     pub late_after_s: f64,
 }
@@ -81,12 +81,12 @@ pub struct HistoryHealth {
     pub state: HistoryState,
     /// Name of the file, without the folders it lies in.
     pub path_name: String,
-    /// Time since the newest commit [s]; `None` before the first.
+    /// Time since the newest commit (s); `None` before the first.
     #[serde(serialize_with = "as_seconds")]
     pub last_commit_age_s: Option<f64>,
     /// Commits that failed since the start.
     pub failed_commits: u64,
-    /// Size of the file [bytes].
+    /// Size of the file (bytes).
     pub bytes: u64,
 }
 
@@ -177,7 +177,7 @@ impl HistoryHealth {
     }
 }
 
-/// Whether an age has reached a limit [s]; an age that is no number has, since nothing is known.
+/// Whether an age has reached a limit (s); an age that is no number has, since nothing is known.
 fn reached(age_s: f64, limit_s: f64) -> bool {
     age_s >= limit_s || age_s.is_nan()
 }

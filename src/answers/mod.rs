@@ -74,7 +74,7 @@ pub struct NodeInfo {
     pub simulated: bool,
     /// Where the samples come from, in words.
     pub source: String,
-    /// SHA-256 of the configuration [64 hexadecimal digits].
+    /// SHA-256 of the configuration (64 hexadecimal digits).
     pub configuration_sha256: String,
 }
 

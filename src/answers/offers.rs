@@ -54,7 +54,7 @@ struct RefusalAnswer {
 struct Wish {
     /// The only channel that will do.
     channel_index: Option<usize>,
-    /// Width that a channel must have at least [Hz].
+    /// Width that a channel must have at least (Hz).
     bandwidth_hz: f64,
     /// How many offers are wanted at most.
     count: usize,

@@ -17,7 +17,7 @@ use crate::detection::time::{NANOS_PER_SECOND, Utc};
 use crate::detection::verdict::Reason;
 use crate::history::{ChannelQuarters, QUARTER_US, QuarterRow, Reader, RunList, RunRow, Sums};
 
-/// Longest range of one question about occupancy [days].
+/// Longest range of one question about occupancy (days).
 const OCCUPANCY_DAYS_MAX: i64 = 31;
 
 /// Quarters of an hour times channels that one answer may hold: a week of 500 channels is 336,000.
@@ -28,7 +28,7 @@ const CELLS_MAX: i64 = 400_000;
 const RUNS_DEFAULT: usize = 1000;
 const RUNS_MAX: usize = 10_000;
 
-/// Length of a quarter of an hour [ns].
+/// Length of a quarter of an hour (ns).
 const QUARTER_NS: i64 = QUARTER_US * 1000;
 
 /// Questions to the history that are worked on at once; further ones wait their turn, within the
@@ -252,7 +252,7 @@ fn channel_occupancy(channel: &ChannelQuarters, range: Range) -> Result<ChannelO
     Ok(columns)
 }
 
-/// Occupied, idle, unknown and own time [s], rounded so that they add up to the whole.
+/// Occupied, idle, unknown and own time (s), rounded so that they add up to the whole.
 fn four_sums(sums: &Sums) -> [f64; 4] {
     figures::parts_as_seconds(
         [sums.occupied_us, sums.idle_us, sums.unknown_us, sums.own_us].map(|us| us * 1000),

@@ -9,7 +9,7 @@ use axum::http::{HeaderValue, StatusCode, header};
 use axum::response::{IntoResponse, Response};
 use serde::Serialize;
 
-/// Longest piece of an asker's text that is given back [characters].
+/// Longest piece of an asker's text that is given back (characters).
 const ECHO_LENGTH_MAX: usize = 64;
 
 /// One problem, ready to be sent.

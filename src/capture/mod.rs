@@ -17,13 +17,13 @@ pub use error::CaptureError;
 
 /// Something that delivers consecutive stamped blocks of samples.
 pub trait Source: Send {
-    /// Radio frequency of the block's middle, where DC falls [Hz].
+    /// Radio frequency of the block's middle, where DC falls (Hz).
     fn centre_hz(&self) -> f64;
 
-    /// Complex samples a second [Hz], above 0.
+    /// Complex samples a second (Hz), above 0.
     fn sample_rate_hz(&self) -> f64;
 
-    /// How many samples there are from the first to the last [samples]; `None` if there is no end.
+    /// How many samples there are from the first to the last (samples); `None` if there is no end.
     fn samples_total(&self) -> Option<u64>;
 
     /// What this is, in one short plain line.
@@ -61,7 +61,7 @@ impl<S: Source + ?Sized> Source for Box<S> {
     }
 }
 
-/// A block without samples, with room for `capacity` [samples]: what [`Source::read`] fills.
+/// A block without samples, with room for `capacity` (samples): what [`Source::read`] fills.
 pub fn empty_block(capacity: usize) -> SampleBlock {
     SampleBlock {
         samples: Vec::with_capacity(capacity),

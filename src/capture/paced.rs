@@ -12,12 +12,12 @@ use crate::detection::block::SampleBlock;
 use crate::detection::time::{NANOS_PER_SECOND, Stamp, samples_to_nanos};
 
 /// How far delivery may fall behind real time, or UTC part from the monotonic clock, before the
-/// stretch between is given up as unobserved [ns].
+/// stretch between is given up as unobserved (ns).
 pub const LATE_MAX_NS: i64 = NANOS_PER_SECOND;
 
 /// Lets time pass. Separate from the clock, so that a simulation needs no real waiting.
 pub trait Pace: Send {
-    /// Returns after about `nanos` [ns, above 0]; it may be earlier, and is then asked again.
+    /// Returns after about `nanos` (ns, above 0); it may be earlier, and is then asked again.
     fn wait(&mut self, nanos: i64);
 }
 
@@ -192,7 +192,7 @@ mod tests {
         }
     }
 
-    /// 1000 samples a second; each read takes as long as the list says [ns] and fills the block.
+    /// 1000 samples a second; each read takes as long as the list says (ns) and fills the block.
     struct Slow {
         clock: Arc<VirtualClock>,
         read_takes_ns: Vec<i64>,
@@ -234,8 +234,8 @@ mod tests {
         (Arc::clone(&clock), Paced::with_pace(slow, clock, pace))
     }
 
-    /// Start of the block on both clocks since the clock's first moment [ms], its gap flag, and
-    /// when it was delivered [ms].
+    /// Start of the block on both clocks since the clock's first moment (ms), its gap flag, and
+    /// when it was delivered (ms).
     fn next(source: &mut Paced<Slow>, clock: &VirtualClock) -> (i64, i64, bool, i64) {
         let first = VirtualClock::new().now();
         let mut block = empty_block(100);

@@ -24,11 +24,11 @@ pub(super) struct Derived {
     pub(super) bin_width_hz: f64,
     pub(super) level_ref: &'static str,
     pub(super) bands: Vec<BandNumbers>,
-    /// Sample buffers, sums and the history's queue when it is full [bytes].
+    /// Sample buffers, sums and the history's queue when it is full (bytes).
     pub(super) buffers_bytes: f64,
-    /// Quarter-hour rollups [bytes a day].
+    /// Quarter-hour rollups (bytes a day).
     pub(super) rollups_bytes_per_day: f64,
-    /// Runs [bytes a day], at [`TRANSMISSIONS_PER_HOUR`] on every channel and the false detections.
+    /// Runs (bytes a day), at [`TRANSMISSIONS_PER_HOUR`] on every channel and the false detections.
     pub(super) runs_bytes_per_day: f64,
 }
 
@@ -48,12 +48,12 @@ pub(super) struct BandNumbers {
     pub(super) reference_cells: usize,
     pub(super) pfa: f64,
     pub(super) pd: f64,
-    /// Over the floor, with all reference cells idle [dB].
+    /// Over the floor, with all reference cells idle (dB).
     pub(super) threshold_over_floor_db: f64,
-    /// Signal alone over the floor, with all reference cells idle [dB].
+    /// Signal alone over the floor, with all reference cells idle (dB).
     pub(super) sensitivity_over_floor_db: f64,
     pub(super) protection_level_db: f64,
-    /// The highest floor in a channel at which the protection level is still heard [dB].
+    /// The highest floor in a channel at which the protection level is still heard (dB).
     pub(super) floor_max_db: f64,
     pub(super) false_detections_per_channel_hour: f64,
     pub(super) false_detections_per_hour: f64,

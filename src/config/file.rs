@@ -97,7 +97,7 @@ pub(super) struct Floor {
     pub(super) trend: Option<String>,
 }
 
-/// `[[bands]]`
+/// `[(bands)]`
 #[derive(Clone, Debug, Default, Deserialize)]
 #[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Band {
@@ -156,7 +156,7 @@ pub(super) struct Raster {
     pub(super) protected: Vec<String>,
 }
 
-/// `[[bands.channels]]`
+/// `[(bands.channels)]`
 #[derive(Clone, Debug, Default, Deserialize)]
 #[serde(deny_unknown_fields, default, expecting = "a table")]
 pub(super) struct Channel {

@@ -133,7 +133,7 @@ impl Configuration {
         Configuration::parse(&text, &name, base)
     }
 
-    /// The centre frequency that the file gives [Hz]; `None` leaves it to the source.
+    /// The centre frequency that the file gives (Hz); `None` leaves it to the source.
     pub fn centre_hz(&self) -> Option<f64> {
         self.receiver.centre_hz
     }
@@ -151,7 +151,7 @@ impl Configuration {
         Ok(Configuration { text: text.to_owned(), sha256: sha256_hex(text), ..checked })
     }
 
-    /// The plan for the block that the source really delivers: its centre and its sample rate [Hz],
+    /// The plan for the block that the source really delivers: its centre and its sample rate (Hz),
     /// where it states them. What it does not state is taken from the file.
     ///
     /// # Errors

@@ -72,7 +72,7 @@ fn hop_samples(spectrum: &SpectrumSettings) -> f64 {
     (spectrum.transform_length as f64 * (1.0 - spectrum.overlap)).round().max(1.0)
 }
 
-/// Width of a bin [Hz].
+/// Width of a bin (Hz).
 pub(super) fn bin_width_hz(receiver: &Receiver, spectrum: &SpectrumSettings) -> f64 {
     receiver.sample_rate_hz / spectrum.transform_length as f64
 }
@@ -134,7 +134,7 @@ fn agreed(
     }
 }
 
-/// Lower and upper end of the usable bandwidth [Hz].
+/// Lower and upper end of the usable bandwidth (Hz).
 fn usable_hz(receiver: &Receiver) -> (f64, f64) {
     let half_hz = receiver.usable_bandwidth_hz / 2.0;
     (receiver.centre_hz - half_hz, receiver.centre_hz + half_hz)

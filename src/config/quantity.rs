@@ -12,13 +12,13 @@ use crate::detection::plan::LevelRef;
 /// The kinds of quantity that can be written.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Quantity {
-    /// A frequency or a width of spectrum [Hz].
+    /// A frequency or a width of spectrum (Hz).
     Frequency,
-    /// Complex samples a second [Hz]; written in S/s or in Hz.
+    /// Complex samples a second (Hz); written in S/s or in Hz.
     SampleRate,
-    /// A power level [dB], with what it refers to.
+    /// A power level (dB), with what it refers to.
     Level,
-    /// A duration [s].
+    /// A duration (s).
     Duration,
     /// A share or a probability (a plain number); written plain or in per cent.
     Share,
@@ -170,7 +170,7 @@ impl fmt::Display for QuantityError {
 
 impl std::error::Error for QuantityError {}
 
-/// Reads a frequency such as `25kHz` or `448.1 MHz` [Hz].
+/// Reads a frequency such as `25kHz` or `448.1 MHz` (Hz).
 ///
 /// # Errors
 /// [`QuantityError`] when the text is no frequency.
@@ -178,7 +178,7 @@ pub fn parse_frequency(text: &str) -> Result<f64, QuantityError> {
     Quantity::Frequency.parse(text)
 }
 
-/// Reads a sample rate such as `2.4MS/s` or `2.4MHz` [Hz].
+/// Reads a sample rate such as `2.4MS/s` or `2.4MHz` (Hz).
 ///
 /// # Errors
 /// [`QuantityError`] when the text is no sample rate.
@@ -186,7 +186,7 @@ pub fn parse_sample_rate(text: &str) -> Result<f64, QuantityError> {
     Quantity::SampleRate.parse(text)
 }
 
-/// Reads a level such as `-96dBm` or `-92dBFS`: its value [dB] and what it refers to.
+/// Reads a level such as `-96dBm` or `-92dBFS`: its value (dB) and what it refers to.
 ///
 /// # Errors
 /// [`QuantityError`] when the text is no level.
@@ -196,7 +196,7 @@ pub fn parse_level(text: &str) -> Result<(f64, LevelRef), QuantityError> {
     Ok((value, level_ref))
 }
 
-/// Reads a duration such as `200ms` or `5 min` [s].
+/// Reads a duration such as `200ms` or `5 min` (s).
 ///
 /// # Errors
 /// [`QuantityError`] when the text is no duration.
@@ -212,22 +212,22 @@ pub fn parse_share(text: &str) -> Result<f64, QuantityError> {
     Quantity::Share.parse(text)
 }
 
-/// Writes a frequency [Hz] to the nearest millihertz: `25 kHz`.
+/// Writes a frequency (Hz) to the nearest millihertz: `25 kHz`.
 pub fn format_frequency(value_hz: f64) -> String {
     thousands(value_hz, &["Hz", "kHz", "MHz", "GHz"])
 }
 
-/// Writes a sample rate [Hz] to the nearest thousandth: `2.4 MS/s`.
+/// Writes a sample rate (Hz) to the nearest thousandth: `2.4 MS/s`.
 pub fn format_sample_rate(value_hz: f64) -> String {
     thousands(value_hz, &["S/s", "kS/s", "MS/s"])
 }
 
-/// Writes a level [dB] to the nearest hundredth: `-92 dBFS`.
+/// Writes a level (dB) to the nearest hundredth: `-92 dBFS`.
 pub fn format_level(value_db: f64, level_ref: LevelRef) -> String {
     format!("{} {}", rounded(value_db, 2), level_ref.as_str())
 }
 
-/// Writes a duration [s] to the nearest nanosecond: `200 ms`, `90 s`, `5 min`.
+/// Writes a duration (s) to the nearest nanosecond: `200 ms`, `90 s`, `5 min`.
 ///
 /// Minutes and days are used from two on, and with hours for whole ones only.
 pub fn format_duration(value_s: f64) -> String {

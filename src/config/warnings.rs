@@ -18,7 +18,7 @@ pub fn idle_offer_share(band: &Band) -> f64 {
     (-band.pfa / band.dwell_s * blocked_s(band)).exp()
 }
 
-/// How long one false alarm keeps a channel off the list [s].
+/// How long one false alarm keeps a channel off the list (s).
 fn blocked_s(band: &Band) -> f64 {
     seconds(band.policy.hold_off_ns) + seconds(band.policy.check_time_ns)
 }

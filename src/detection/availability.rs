@@ -44,17 +44,17 @@ impl Refusal {
 pub struct Offer {
     /// Index of the channel in the plan.
     pub channel_index: usize,
-    /// The answer holds for this long from `now` [ns], more than 0.
+    /// The answer holds for this long from `now` (ns), more than 0.
     pub valid_for_ns: i64,
     /// Sequence number of the dwell behind it.
     pub sequence: u64,
-    /// Age of the evidence [ns].
+    /// Age of the evidence (ns).
     pub evidence_age_ns: i64,
-    /// How long the channel has been idle without a gap [ns].
+    /// How long the channel has been idle without a gap (ns).
     pub idle_for_ns: i64,
-    /// Threshold minus power [dB].
+    /// Threshold minus power (dB).
     pub margin_db: f64,
-    /// Sensitivity of the dwell behind it [dB].
+    /// Sensitivity of the dwell behind it (dB).
     pub sensitivity_db: f64,
 }
 

@@ -9,7 +9,7 @@ pub struct BinSpan {
     pub first: usize,
     /// Share of each bin, from the first on; not all 0.
     pub weights: Vec<f64>,
-    /// Sum of the weights [bins].
+    /// Sum of the weights (bins).
     pub width_bins: f64,
 }
 
@@ -34,7 +34,7 @@ pub struct ChannelSpan {
     pub channel_index: usize,
     /// Its bins.
     pub span: BinSpan,
-    /// The channel's bandwidth [bins]; wider than the span where DC bins are left out.
+    /// The channel's bandwidth (bins); wider than the span where DC bins are left out.
     pub bandwidth_bins: f64,
     /// Position of its centre across the usable bandwidth (-1 to 1).
     pub position: f64,
@@ -54,7 +54,7 @@ pub struct ReferenceCell {
 /// The block's bins, laid out for one plan.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Layout {
-    /// Distance between bins [Hz].
+    /// Distance between bins (Hz).
     pub bin_width_hz: f64,
     /// The channels, in the order asked for.
     pub channels: Vec<ChannelSpan>,
@@ -113,13 +113,13 @@ struct Grid {
     bin_width_hz: f64,
     centre_hz: f64,
     length: usize,
-    /// Half the usable bandwidth [bins].
+    /// Half the usable bandwidth (bins).
     usable_half_bins: f64,
-    /// Half the DC guard [bins]; 0 leaves DC in.
+    /// Half the DC guard (bins); 0 leaves DC in.
     guard_half_bins: f64,
     /// Bins to keep between two cells so that their energies are nearly independent.
     separation: usize,
-    /// Width of cells between channels [bins].
+    /// Width of cells between channels (bins).
     cell_bins: usize,
 }
 

@@ -7,13 +7,13 @@ use super::window::Window;
 /// The block of spectrum that the receiver delivers.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Receiver {
-    /// Radio frequency of the block's middle, where DC falls [Hz].
+    /// Radio frequency of the block's middle, where DC falls (Hz).
     pub centre_hz: f64,
-    /// Complex samples a second [Hz].
+    /// Complex samples a second (Hz).
     pub sample_rate_hz: f64,
-    /// Width around the centre in which the front end is trusted [Hz], at most the sample rate.
+    /// Width around the centre in which the front end is trusted (Hz), at most the sample rate.
     pub usable_bandwidth_hz: f64,
-    /// Width around the centre that is left out of every channel and reference cell [Hz], 0 or more.
+    /// Width around the centre that is left out of every channel and reference cell (Hz), 0 or more.
     pub dc_guard_hz: f64,
 }
 
@@ -24,7 +24,7 @@ pub struct SpectrumSettings {
     pub window: Window,
     /// Overlap of consecutive transforms that is asked for (share of the transform, 0 to 0.9).
     pub overlap: f64,
-    /// Transform length [samples], a power of two.
+    /// Transform length (samples), a power of two.
     pub transform_length: usize,
 }
 
@@ -69,11 +69,11 @@ pub struct Band {
     pub pfa: f64,
     /// Required detection probability at the protection level (0.5 to 1).
     pub pd: f64,
-    /// Power at which an incumbent must be detected, in the plan's level reference [dB].
+    /// Power at which an incumbent must be detected, in the plan's level reference (dB).
     pub protection_level_db: f64,
-    /// Length of a dwell that is asked for [s].
+    /// Length of a dwell that is asked for (s).
     pub dwell_s: f64,
-    /// Length of a slice that is asked for [s], at most the dwell.
+    /// Length of a slice that is asked for (s), at most the dwell.
     pub slice_s: f64,
     /// Rules for the offer of a channel.
     pub policy: Policy,
@@ -82,11 +82,11 @@ pub struct Band {
 /// When a channel may be offered.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Policy {
-    /// A channel must have been idle without a gap this long before first use [ns].
+    /// A channel must have been idle without a gap this long before first use (ns).
     pub check_time_ns: i64,
-    /// No offer for this long after a detection [ns].
+    /// No offer for this long after a detection (ns).
     pub hold_off_ns: i64,
-    /// The newest verdict must be younger than this [ns].
+    /// The newest verdict must be younger than this (ns).
     pub max_age_ns: i64,
 }
 
@@ -97,16 +97,16 @@ pub struct Channel {
     pub id: String,
     /// Index of its band in [`Plan::bands`].
     pub band_index: usize,
-    /// Centre frequency [Hz].
+    /// Centre frequency (Hz).
     pub centre_hz: f64,
-    /// Bandwidth in which energy is measured [Hz].
+    /// Bandwidth in which energy is measured (Hz).
     pub bandwidth_hz: f64,
     /// Protected: watched and recorded, never on offer.
     pub protected: bool,
 }
 
 impl Channel {
-    /// Lower and upper edge [Hz].
+    /// Lower and upper edge (Hz).
     pub fn edges_hz(&self) -> (f64, f64) {
         (self.centre_hz - self.bandwidth_hz / 2.0, self.centre_hz + self.bandwidth_hz / 2.0)
     }

@@ -53,7 +53,7 @@ struct DwellInProgress {
     slice_spectrum: Vec<f32>,
     /// Sum of the slices' means.
     power: Vec<f64>,
-    /// Energy per slice and channel [dB].
+    /// Energy per slice and channel (dB).
     slice_power_db: Vec<f32>,
 }
 

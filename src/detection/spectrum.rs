@@ -32,7 +32,7 @@ impl Spectrum {
         }
     }
 
-    /// Transform length [samples].
+    /// Transform length (samples).
     pub fn length(&self) -> usize {
         self.taper.len()
     }

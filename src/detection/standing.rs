@@ -8,7 +8,7 @@ use super::time::Stamp;
 use super::verdict::{DwellReport, State, Verdict};
 
 /// Two dwells follow each other without a gap when the second starts within this of the first's end
-/// [ns]. Stamps count samples, so only rounding separates neighbours; a real gap is far longer.
+/// (ns). Stamps count samples, so only rounding separates neighbours; a real gap is far longer.
 pub const CONTIGUITY_NS: i64 = 1_000_000;
 
 /// Where one channel stands.
@@ -42,12 +42,12 @@ impl ChannelStanding {
         }
     }
 
-    /// How long the channel has been in its state without a gap, up to the newest dwell's end [ns].
+    /// How long the channel has been in its state without a gap, up to the newest dwell's end (ns).
     pub fn run_length_ns(&self) -> i64 {
         self.end.monotonic_ns - self.since.monotonic_ns
     }
 
-    /// Age of the evidence: time from the newest dwell's end to `now` [ns]; `None` before the first.
+    /// Age of the evidence: time from the newest dwell's end to `now` (ns); `None` before the first.
     pub fn age_ns(&self, now: Stamp) -> Option<i64> {
         self.verdict.map(|_| now.monotonic_ns - self.end.monotonic_ns)
     }

@@ -26,7 +26,7 @@ impl Utc {
 pub struct Stamp {
     /// UTC.
     pub utc: Utc,
-    /// Monotonic time [ns], from an origin that stays the same while the program runs.
+    /// Monotonic time (ns), from an origin that stays the same while the program runs.
     pub monotonic_ns: i64,
 }
 
@@ -37,7 +37,7 @@ impl Stamp {
     }
 }
 
-/// Duration of `samples` samples at `sample_rate_hz`, rounded to the nearest nanosecond [ns].
+/// Duration of `samples` samples at `sample_rate_hz`, rounded to the nearest nanosecond (ns).
 ///
 /// Exact to 1 ns for any count below 2^63: whole seconds and the remainder are kept apart, since
 /// `samples * 1e9` would lose nanoseconds in a double after some weeks of samples.

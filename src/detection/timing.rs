@@ -10,7 +10,7 @@ const HOP_SHARE_MIN: usize = 16;
 /// The cut that comes nearest to what was asked for.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub struct Timing {
-    /// Distance between transforms [samples]; the overlap is at least the one asked for.
+    /// Distance between transforms (samples); the overlap is at least the one asked for.
     pub hop: usize,
     /// Transforms in one slice.
     pub transforms_per_slice: usize,
@@ -32,17 +32,17 @@ impl Timing {
         Timing { hop, transforms_per_slice: transforms_per_slice as usize, slices: slices as usize }
     }
 
-    /// Length of a slice [samples].
+    /// Length of a slice (samples).
     pub fn slice_samples(&self) -> usize {
         self.hop * self.transforms_per_slice
     }
 
-    /// Length of a dwell [samples].
+    /// Length of a dwell (samples).
     pub fn dwell_samples(&self) -> usize {
         self.slice_samples() * self.slices
     }
 
-    /// Length of a dwell [ns].
+    /// Length of a dwell (ns).
     pub fn dwell_ns(&self, sample_rate_hz: f64) -> i64 {
         samples_to_nanos(self.dwell_samples() as u64, sample_rate_hz)
     }

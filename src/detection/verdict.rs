@@ -123,13 +123,13 @@ impl Reasons {
 /// The levels behind a verdict, all in the channel's bandwidth and in the plan's level reference.
 #[derive(Clone, Copy, Debug, PartialEq)]
 pub struct Levels {
-    /// All power in the channel's bandwidth, noise included [dB].
+    /// All power in the channel's bandwidth, noise included (dB).
     pub power_db: f64,
-    /// Noise power in the channel's bandwidth [dB].
+    /// Noise power in the channel's bandwidth (dB).
     pub floor_db: f64,
-    /// The power at which the verdict turns [dB].
+    /// The power at which the verdict turns (dB).
     pub threshold_db: f64,
-    /// The power of a signal alone that this dwell would have detected with the required Pd [dB].
+    /// The power of a signal alone that this dwell would have detected with the required Pd (dB).
     pub sensitivity_db: f64,
 }
 
@@ -161,11 +161,11 @@ pub struct DwellReport {
     pub sequence: u64,
     /// When the dwell's first sample was taken.
     pub start: Stamp,
-    /// Time really observed, which is also the time that the verdicts stand for [ns].
+    /// Time really observed, which is also the time that the verdicts stand for (ns).
     pub observed_ns: i64,
     /// The verdicts, by rising channel index.
     pub verdicts: Vec<Verdict>,
-    /// Energy of each slice in each of those channels: mean power in the channel's bandwidth [dB],
+    /// Energy of each slice in each of those channels: mean power in the channel's bandwidth (dB),
     /// `slice_power_db[slice * verdicts.len() + i]`; empty when the dwell could not be measured.
     pub slice_power_db: Vec<f32>,
     /// The dwell's averaged spectrum, lowest frequency first: power per bin, linear, full scale = 1.

@@ -21,7 +21,7 @@ impl Window {
         }
     }
 
-    /// Half the width of the main lobe, null to centre [bins]: what a carrier spreads over.
+    /// Half the width of the main lobe, null to centre (bins): what a carrier spreads over.
     pub fn main_lobe_half_width_bins(self) -> usize {
         self.coefficients().len()
     }

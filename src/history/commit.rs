@@ -52,7 +52,7 @@ pub(super) struct Recorder {
 }
 
 impl Recorder {
-    /// Opens the file; also returns where each channel's record ends [us].
+    /// Opens the file; also returns where each channel's record ends (us).
     pub(super) fn open(
         path: &Path,
         identity: &Identity,
@@ -123,7 +123,7 @@ impl Recorder {
     }
 }
 
-/// The identities that the file has already, and where each channel's record ends [us].
+/// The identities that the file has already, and where each channel's record ends (us).
 fn known(
     file: &HistoryFile,
     configuration: &Configuration,

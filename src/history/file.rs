@@ -21,7 +21,7 @@ const MIGRATIONS: [&str; 1] = [include_str!("../../migrations/0001_first_light.s
 /// 4096 is right: 2048 saved 17 % of flash wear in our trials, 8192 and more cost a lot.
 const PAGE_BYTES: u64 = 4096;
 
-/// What the log may keep on disk once it has been copied back [bytes].
+/// What the log may keep on disk once it has been copied back (bytes).
 const LOG_BYTES_MAX: i64 = 16 << 20;
 
 /// The one writing connection, and the lock that keeps it the only one.
@@ -57,7 +57,7 @@ impl HistoryFile {
         Ok(HistoryFile { path: path.to_path_buf(), connection, _lock: lock })
     }
 
-    /// Sets the size that the database may take [bytes]; `None` for no limit of ours.
+    /// Sets the size that the database may take (bytes); `None` for no limit of ours.
     pub(super) fn limit_bytes(&self, bytes: Option<u64>) -> rusqlite::Result<()> {
         // 4294967294 pages is SQLite's own limit.
         let pages = bytes.map_or(4_294_967_294, |bytes| (bytes / PAGE_BYTES).max(1) as i64);
@@ -72,7 +72,7 @@ impl HistoryFile {
         }
     }
 
-    /// Size of the database and its log on disk [bytes].
+    /// Size of the database and its log on disk (bytes).
     pub(super) fn bytes(&self) -> u64 {
         let length = |path: &Path| path.metadata().map_or(0, |metadata| metadata.len());
         length(&self.path) + length(&beside(&self.path, "-wal"))

@@ -50,7 +50,7 @@ pub struct HistoryHealth {
     pub waiting_runs: u64,
     /// Reports that began before the record's end (UTC had gone back); the overlap was left out.
     pub clipped_reports: u64,
-    /// Size of the database and its log on disk [bytes], as of the last commit.
+    /// Size of the database and its log on disk (bytes), as of the last commit.
     pub file_bytes: u64,
 }
 

@@ -41,11 +41,11 @@ pub struct Identity {
     pub configuration_text: String,
 }
 
-/// What a row of a run takes in the file, its share of the index pages included [bytes]; measured by
+/// What a row of a run takes in the file, its share of the index pages included (bytes); measured by
 /// `a_row_takes_the_space_that_is_stated`.
 pub const RUN_ROW_BYTES: f64 = 60.0;
 
-/// What a row of a quarter hour takes in the file [bytes]; measured likewise.
+/// What a row of a quarter hour takes in the file (bytes); measured likewise.
 pub const QUARTER_ROW_BYTES: f64 = 40.0;
 
 /// Quarter hours in a day.
@@ -65,7 +65,7 @@ pub struct Options {
     /// 100,000: some 12 MB, and three hours of 500 channels at 9 changes a second). Beyond it the
     /// oldest are dropped, counted, and their time is unknown.
     pub waiting_runs_max: usize,
-    /// Size that the database may take [bytes], `None` for all that the disk has (default). At the
+    /// Size that the database may take (bytes), `None` for all that the disk has (default). At the
     /// limit the history stops and says so, as on a full disk.
     pub file_bytes_max: Option<u64>,
 }

@@ -34,13 +34,13 @@ pub struct RunRow {
     pub state: RunState,
     /// Why.
     pub reasons: Reasons,
-    /// Mean power of the whole run, if occupied [dB], linear average over observed time.
+    /// Mean power of the whole run, if occupied (dB), linear average over observed time.
     pub power_mean_db: Option<f64>,
-    /// Highest dwell power of the whole run, if occupied [dB].
+    /// Highest dwell power of the whole run, if occupied (dB).
     pub power_max_db: Option<f64>,
     /// What the powers refer to (`dBFS` or `dBm`); `None` for time without a record.
     pub level_ref: Option<String>,
-    /// Time in which samples were really taken [us]; for a run cut by the range, in proportion.
+    /// Time in which samples were really taken (us); for a run cut by the range, in proportion.
     pub observed_us: i64,
 }
 

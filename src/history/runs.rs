@@ -13,13 +13,13 @@ use std::collections::VecDeque;
 use crate::detection::time::Utc;
 use crate::detection::verdict::{DwellReport, Reason, Reasons, State, Verdict};
 
-/// A dwell that starts within this of the record's end counts as starting right there [us].
+/// A dwell that starts within this of the record's end counts as starting right there (us).
 ///
 /// Sample clocks and UTC stamps disagree by parts per million, which is microseconds a dwell; a
 /// lost buffer is many milliseconds. One millisecond stands clear of both.
 pub const TOLERANCE_US: i64 = 1_000;
 
-/// A quarter of an hour [us]; quarters begin at multiples of it in UTC.
+/// A quarter of an hour (us); quarters begin at multiples of it in UTC.
 pub const QUARTER_US: i64 = 900_000_000;
 
 /// What a stretch of the record says: the three states of a verdict, own transmissions apart.
@@ -87,29 +87,29 @@ impl PowerSum {
 pub struct Run {
     /// Index of the channel in the plan.
     pub channel_index: usize,
-    /// Begin [us].
+    /// Begin (us).
     pub start_us: i64,
-    /// End (half-open) [us].
+    /// End (half-open) (us).
     pub end_us: i64,
     /// What it says.
     pub state: RunState,
     /// Why. The dwells of an unknown run all have the same reasons; other runs hold the union.
     pub reasons: Reasons,
-    /// The part in which samples were really taken [us].
+    /// The part in which samples were really taken (us).
     pub observed_us: i64,
     power: PowerSum,
-    /// How far the run is on the record: its end and observed time as of the last commit [us].
+    /// How far the run is on the record: its end and observed time as of the last commit (us).
     recorded: (i64, i64),
 }
 
 impl Run {
-    /// Mean power of an occupied run [dB], linear average over observed time.
+    /// Mean power of an occupied run (dB), linear average over observed time.
     pub fn power_mean_db(&self) -> Option<f64> {
         (self.power.weight_us > 0.0)
             .then(|| 10.0 * (self.power.linear_us / self.power.weight_us).log10())
     }
 
-    /// Highest dwell power of an occupied run [dB].
+    /// Highest dwell power of an occupied run (dB).
     pub fn power_max_db(&self) -> Option<f64> {
         self.power.max_db
     }
@@ -154,7 +154,7 @@ pub(super) fn portion(amount: i64, part: i64, whole: i64) -> i64 {
     (i128::from(amount) * i128::from(part) / i128::from(whole)) as i64
 }
 
-/// Begin of the quarter that holds a moment [us].
+/// Begin of the quarter that holds a moment (us).
 pub(super) fn quarter_start(us: i64) -> i64 {
     us.div_euclid(QUARTER_US) * QUARTER_US
 }
@@ -164,23 +164,23 @@ pub(super) fn micros(moment: Utc) -> i64 {
     moment.0.div_euclid(1_000)
 }
 
-/// Represented time in each state, and the time in which samples were taken [us].
+/// Represented time in each state, and the time in which samples were taken (us).
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
 pub struct Sums {
-    /// Time in which an incumbent was detected [us].
+    /// Time in which an incumbent was detected (us).
     pub occupied_us: i64,
-    /// Time found idle [us].
+    /// Time found idle (us).
     pub idle_us: i64,
-    /// Time of which nobody can tell [us].
+    /// Time of which nobody can tell (us).
     pub unknown_us: i64,
-    /// Time of the site's own transmissions [us].
+    /// Time of the site's own transmissions (us).
     pub own_us: i64,
-    /// Time in which samples were really taken [us].
+    /// Time in which samples were really taken (us).
     pub observed_us: i64,
 }
 
 impl Sums {
-    /// Adds represented time in a state, and the observed part of it [us].
+    /// Adds represented time in a state, and the observed part of it (us).
     pub fn add(&mut self, state: RunState, represented_us: i64, observed_us: i64) {
         *match state {
             RunState::Occupied => &mut self.occupied_us,
@@ -191,7 +191,7 @@ impl Sums {
         self.observed_us += observed_us;
     }
 
-    /// The four sums together [us].
+    /// The four sums together (us).
     pub fn represented_us(&self) -> i64 {
         self.occupied_us + self.idle_us + self.unknown_us + self.own_us
     }
@@ -200,7 +200,7 @@ impl Sums {
 /// One channel's place in the record.
 #[derive(Clone, Debug, Default)]
 struct Track {
-    /// Up to where the record stands [us]; `None` before the channel's first dwell ever.
+    /// Up to where the record stands (us); `None` before the channel's first dwell ever.
     end_us: Option<i64>,
     open: Option<Run>,
 }
@@ -219,7 +219,7 @@ pub struct RunKeeper {
 
 impl RunKeeper {
     /// A keeper for channels whose record ends at `ends_us` (`None` for a channel without any)
-    /// [us]; their time since then becomes unknown with their first dwell. At most `closed_max`
+    /// (us); their time since then becomes unknown with their first dwell. At most `closed_max`
     /// closed runs are held, 1 or more; beyond that the oldest are dropped and counted.
     pub fn new(ends_us: &[Option<i64>], closed_max: usize) -> RunKeeper {
         assert!(closed_max > 0, "a keeper must be allowed to hold a run");
@@ -350,12 +350,12 @@ impl RunKeeper {
         self.clipped_reports
     }
 
-    /// Start of the first report [us].
+    /// Start of the first report (us).
     pub fn first_start_us(&self) -> Option<i64> {
         self.first_start_us
     }
 
-    /// The latest end of all reports [us].
+    /// The latest end of all reports (us).
     pub fn recorded_until_us(&self) -> Option<i64> {
         self.recorded_until_us
     }

@@ -28,7 +28,7 @@ pub struct Writer {
     queue: Option<SyncSender<Arc<DwellReport>>>,
     thread: Option<JoinHandle<()>>,
     health: HealthView,
-    /// Allowed size [bytes], `u64::MAX` for no limit.
+    /// Allowed size (bytes), `u64::MAX` for no limit.
     file_bytes_max: Arc<AtomicU64>,
 }
 
@@ -81,7 +81,7 @@ impl Writer {
         taken
     }
 
-    /// Changes the size that the database may take [bytes], from the next commit on. A database
+    /// Changes the size that the database may take (bytes), from the next commit on. A database
     /// that is larger already stays as it is and does not grow.
     pub fn limit_file_bytes(&self, bytes: Option<u64>) {
         self.file_bytes_max.store(bytes.unwrap_or(u64::MAX), Ordering::Relaxed);

@@ -3,19 +3,19 @@
 
 use super::spec::{Habit, Hours, RasterChannel, SceneSpec, User, UserKind};
 
-/// Middle of the block [Hz].
+/// Middle of the block (Hz).
 const CENTRE_HZ: f64 = 448.1e6;
-/// Sample rate [Hz].
+/// Sample rate (Hz).
 const SAMPLE_RATE_HZ: f64 = 2.4e6;
-/// Channel raster [Hz].
+/// Channel raster (Hz).
 const RASTER_HZ: f64 = 25e3;
-/// Measured bandwidth of a channel [Hz].
+/// Measured bandwidth of a channel (Hz).
 const CHANNEL_BANDWIDTH_HZ: f64 = 16e3;
-/// Noise power in a channel at the middle of the block [dBFS].
+/// Noise power in a channel at the middle of the block (dBFS).
 const FLOOR_DBFS: f64 = -95.0;
-/// Rise of the floor over the block [dB].
+/// Rise of the floor over the block (dB).
 const SLOPE_DB: f64 = 3.0;
-/// The strong neighbour, over the noise in a channel [dB].
+/// The strong neighbour, over the noise in a channel (dB).
 const NEIGHBOUR_SNR_DB: f64 = 68.0;
 
 /// Who uses S01, S02, ... S90: `q`uarry, `f`arm, `t`axi, tele`m`etry, `d`ata link, `b`eacon,
@@ -24,7 +24,7 @@ const USE_OF_CHANNELS: &str =
     "tq.mtqm.f.td.t.fmfb..tmf.d.fqf.df.mqm.q.tqf.fqmtm.mf.t.q.cqtc.q.tftm.q.qmtdb.cm.m..q.f.d..";
 
 /// Levels over the noise, dealt in this order to the users of each kind, lowest frequency first
-/// [dB]. From below what any dwell can hear to strong; the order keeps neighbours unlike.
+/// (dB). From below what any dwell can hear to strong; the order keeps neighbours unlike.
 const SNR_DB: [f64; 15] =
     [12.0, -2.0, 30.0, 4.0, 60.0, -8.0, 16.0, 1.0, 40.0, -5.0, 8.0, 22.0, 6.0, 50.0, 2.5];
 
@@ -99,7 +99,7 @@ fn user_of(spec: &SceneSpec, channel: &RasterChannel, kind: UserKind, nth: usize
     }
 }
 
-/// Occupied bandwidth of the `nth` user of a kind [Hz].
+/// Occupied bandwidth of the `nth` user of a kind (Hz).
 fn bandwidth_hz(kind: UserKind, nth: usize) -> f64 {
     match kind {
         // The first beacon is a plain carrier, the second a control carrier with slow symbols.

@@ -15,7 +15,7 @@ use super::timeline::Transmission;
 /// Samples of the scene for one sample of a source.
 pub(super) const DECIMATION: usize = 64;
 
-/// Length of the key's ramps, inside the time on [s]. A raised cosine of 1 ms keeps what
+/// Length of the key's ramps, inside the time on (s). A raised cosine of 1 ms keeps what
 /// the key throws into the next channel more than 90 dB down, over a slice of 10 ms.
 pub(super) const RAMP_S: f64 = 1e-3;
 
@@ -38,17 +38,17 @@ pub(super) struct Source {
     levels: [f64; 4],
     /// Place between the inner two of them (0 to 1).
     place: f64,
-    /// Peak deviation [turns a sample of the source].
+    /// Peak deviation (turns a sample of the source).
     deviation: f64,
-    /// Carrier frequency above the bin that the source is placed on [turns a sample].
+    /// Carrier frequency above the bin that the source is placed on (turns a sample).
     carrier: f64,
-    /// Phase [turns].
+    /// Phase (turns).
     phase: f64,
 }
 
 impl Source {
     /// The source of a user. `remainder_hz` is its carrier frequency above the bin that the source
-    /// will be placed on [Hz].
+    /// will be placed on (Hz).
     pub(super) fn new(
         user: &User,
         remainder_hz: f64,
@@ -103,7 +103,7 @@ impl Source {
         }
     }
 
-    /// Amplitude at a distance from the nearer end of the transmission [samples].
+    /// Amplitude at a distance from the nearer end of the transmission (samples).
     fn key(&self, edge_distance: f64) -> f32 {
         if edge_distance >= self.ramp_samples {
             return self.amplitude;

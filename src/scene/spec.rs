@@ -3,7 +3,7 @@
 //! Nothing here is random: a [`SceneSpec`] says what kind of thing happens, and the seed that is
 //! given to [`super::Scene::new`] says when. It must never describe a real site or a real user.
 
-/// Bandwidth that [`SceneSpec::floor_dbfs`] refers to [Hz].
+/// Bandwidth that [`SceneSpec::floor_dbfs`] refers to (Hz).
 pub const FLOOR_BANDWIDTH_HZ: f64 = 16e3;
 
 /// Seconds in one week.
@@ -12,16 +12,16 @@ const WEEK_S: f64 = 7.0 * 86_400.0;
 /// An invented site: everything that a scene is made from, besides its seed.
 #[derive(Clone, Debug, PartialEq)]
 pub struct SceneSpec {
-    /// Radio frequency of the block's middle [Hz].
+    /// Radio frequency of the block's middle (Hz).
     pub centre_hz: f64,
-    /// Complex samples a second [Hz].
+    /// Complex samples a second (Hz).
     pub sample_rate_hz: f64,
-    /// Noise power at the block's middle in [`FLOOR_BANDWIDTH_HZ`] [dBFS].
+    /// Noise power at the block's middle in [`FLOOR_BANDWIDTH_HZ`] (dBFS).
     pub floor_dbfs: f64,
     /// Rise of the noise density from the lowest to the highest frequency of the block, which is
-    /// one sample rate wide: a straight line in decibels [dB].
+    /// one sample rate wide: a straight line in decibels (dB).
     pub slope_db: f64,
-    /// Time of the week at the first sample, from Monday 00:00 site time [s].
+    /// Time of the week at the first sample, from Monday 00:00 site time (s).
     pub start_of_week_s: f64,
     /// The channels, by rising frequency.
     pub channels: Vec<RasterChannel>,
@@ -34,9 +34,9 @@ pub struct SceneSpec {
 pub struct RasterChannel {
     /// Name, unique in the scene.
     pub id: String,
-    /// Centre frequency [Hz].
+    /// Centre frequency (Hz).
     pub centre_hz: f64,
-    /// Bandwidth in which energy is measured [Hz].
+    /// Bandwidth in which energy is measured (Hz).
     pub bandwidth_hz: f64,
     /// Protected: never on offer.
     pub protected: bool,
@@ -104,11 +104,11 @@ pub struct User {
     pub kind: UserKind,
     /// The channel that it uses; `None` outside the raster.
     pub channel_id: Option<String>,
-    /// Its carrier frequency, which may be some hundred hertz off the channel's centre [Hz].
+    /// Its carrier frequency, which may be some hundred hertz off the channel's centre (Hz).
     pub centre_hz: f64,
-    /// Occupied bandwidth by Carson's rule [Hz]; 0 is a plain carrier.
+    /// Occupied bandwidth by Carson's rule (Hz); 0 is a plain carrier.
     pub bandwidth_hz: f64,
-    /// Mean power while it is on, key ramps apart [dBFS].
+    /// Mean power while it is on, key ramps apart (dBFS).
     pub level_dbfs: f64,
     /// When it is on.
     pub habit: Habit,
@@ -121,28 +121,28 @@ pub enum Habit {
     Always,
     /// Exchanges of calls, a random gap apart. Sessions of one call are exchanges too.
     Exchanges {
-        /// Mean gap from one exchange to the next, exponential, in open hours [s].
+        /// Mean gap from one exchange to the next, exponential, in open hours (s).
         gap_s: f64,
         /// Mean number of calls in an exchange, geometric, 1 or more.
         calls: f64,
-        /// Mean length of a call: the shortest and an exponential on top of it [s].
+        /// Mean length of a call: the shortest and an exponential on top of it (s).
         call_s: f64,
-        /// Shortest call, at most the mean [s].
+        /// Shortest call, at most the mean (s).
         call_shortest_s: f64,
-        /// Mean pause between the calls of an exchange, exponential [s].
+        /// Mean pause between the calls of an exchange, exponential (s).
         pause_s: f64,
         /// Open hours; `None` is round the clock.
         hours: Option<Hours>,
     },
     /// Bursts at a fixed interval with a jitter that does not add up.
     Bursts {
-        /// Interval [s].
+        /// Interval (s).
         period_s: f64,
-        /// Largest departure from the interval's mark, either way, uniform [s].
+        /// Largest departure from the interval's mark, either way, uniform (s).
         jitter_s: f64,
-        /// Shortest burst [s].
+        /// Shortest burst (s).
         shortest_s: f64,
-        /// Longest burst; lengths are uniform in between [s].
+        /// Longest burst; lengths are uniform in between (s).
         longest_s: f64,
     },
 }
@@ -170,16 +170,16 @@ impl Habit {
 pub struct Hours {
     /// Monday to Friday only.
     pub weekdays_only: bool,
-    /// Opening time, site time [h].
+    /// Opening time, site time (h).
     pub from_h: f64,
-    /// Closing time, later than the opening [h].
+    /// Closing time, later than the opening (h).
     pub to_h: f64,
     /// Rate of exchanges outside these hours, as a share of the rate inside (0 to 1).
     pub outside_share: f64,
 }
 
 impl Hours {
-    /// Rate of exchanges at a time of the week, counted from Monday 00:00 [s], as a share of the
+    /// Rate of exchanges at a time of the week, counted from Monday 00:00 (s), as a share of the
     /// rate in open hours.
     pub fn share_at(&self, of_week_s: f64) -> f64 {
         let of_week_h = of_week_s.rem_euclid(WEEK_S) / 3600.0;
@@ -204,7 +204,7 @@ impl SceneSpec {
         }
     }
 
-    /// Noise power at a radio frequency [Hz] in a bandwidth [Hz], [dBFS].
+    /// Noise power at a radio frequency (Hz) in a bandwidth (Hz), (dBFS).
     ///
     /// The density at the middle times the bandwidth: over one channel the slope changes that by
     /// less than 1e-4 dB.
@@ -214,7 +214,7 @@ impl SceneSpec {
             + 10.0 * (bandwidth_hz / FLOOR_BANDWIDTH_HZ).log10()
     }
 
-    /// A user's level over the noise in [`FLOOR_BANDWIDTH_HZ`] around its carrier [dB].
+    /// A user's level over the noise in [`FLOOR_BANDWIDTH_HZ`] around its carrier (dB).
     pub fn snr_db(&self, user: &User) -> f64 {
         user.level_dbfs - self.floor_dbfs_in(user.centre_hz, FLOOR_BANDWIDTH_HZ)
     }

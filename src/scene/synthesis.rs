@@ -21,9 +21,9 @@ use super::source::{DECIMATION, RAMP_S, Source};
 use super::spec::{Habit, RasterChannel, SceneSpec, User};
 use super::truth::{Purpose, Truth, streams};
 
-/// Transform length [samples].
+/// Transform length (samples).
 const BLOCK: usize = 16_384;
-/// Length of the cross-fade between consecutive blocks [samples].
+/// Length of the cross-fade between consecutive blocks (samples).
 const FADE: usize = BLOCK / 2;
 /// New samples in each block.
 pub(super) const HOP: usize = BLOCK - FADE;

@@ -11,9 +11,9 @@ use super::*;
 use crate::detection::window::Window;
 
 const SEED: u64 = 20_260_301;
-/// Transform length of the measurement [samples].
+/// Transform length of the measurement (samples).
 const LENGTH: usize = 4096;
-/// A floor so low that it shows nothing but the signals [dBFS].
+/// A floor so low that it shows nothing but the signals (dBFS).
 const NO_FLOOR_DBFS: f64 = -220.0;
 
 fn samples_of(spec: &SceneSpec, seed: u64, count: usize) -> Vec<Complex32> {
@@ -76,7 +76,7 @@ impl Measured {
         self.spec.sample_rate_hz / LENGTH as f64
     }
 
-    /// Power in each bin with its distance from a radio frequency [Hz].
+    /// Power in each bin with its distance from a radio frequency (Hz).
     fn around(&self, centre_hz: f64) -> impl Iterator<Item = (f64, f64)> + '_ {
         let from_centre_hz = self.spec.centre_hz - centre_hz;
         self.power.iter().enumerate().map(move |(index, power)| {
@@ -98,7 +98,7 @@ impl Measured {
         10.0 * (density * bandwidth_hz).log10()
     }
 
-    /// All power nearer to a radio frequency than half a bandwidth, and all the rest [dBFS].
+    /// All power nearer to a radio frequency than half a bandwidth, and all the rest (dBFS).
     fn inside_and_beyond_dbfs(&self, centre_hz: f64, bandwidth_hz: f64) -> (f64, f64) {
         let (mut inside, mut beyond) = (0.0, 0.0);
         for (distance_hz, power) in self.around(centre_hz) {
@@ -107,7 +107,7 @@ impl Measured {
         (10.0 * inside.log10(), 10.0 * beyond.log10())
     }
 
-    /// Standard deviation of the noise power measured in a bandwidth [dB].
+    /// Standard deviation of the noise power measured in a bandwidth (dB).
     ///
     /// A segment is worth bandwidth * duration independent values, its duration being that of a
     /// rectangle with the window's energy: (sum w^2)^2 / sum w^4.

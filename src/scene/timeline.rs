@@ -10,7 +10,7 @@ use rand_xoshiro::Xoshiro256PlusPlus;
 
 use super::spec::{Habit, Hours, SceneSpec};
 
-/// How long before the first sample a timeline begins [s], so that the scene starts in mid-life
+/// How long before the first sample a timeline begins (s), so that the scene starts in mid-life
 /// and not with everybody silent.
 const EARLIER_S: f64 = 3600.0;
 
@@ -34,7 +34,7 @@ pub(super) struct Timeline {
     known_until: i64,
     /// The next burst's number; its mark is that many periods after the timeline's own start.
     next_burst: u64,
-    /// Start of the bursts' raster [samples].
+    /// Start of the bursts' raster (samples).
     burst_origin: i64,
     /// Known transmissions, oldest first; they neither overlap nor touch.
     transmissions: VecDeque<Transmission>,
@@ -163,12 +163,12 @@ impl Timeline {
         }
     }
 
-    /// A duration [s] in samples, to the nearest.
+    /// A duration (s) in samples, to the nearest.
     fn samples(&self, duration_s: f64) -> i64 {
         (duration_s * self.sample_rate_hz).round() as i64
     }
 
-    /// An exponential duration with the given mean [s].
+    /// An exponential duration with the given mean (s).
     fn exponential_s(&mut self, mean_s: f64) -> f64 {
         let unit: f64 = Exp1.sample(&mut self.rng);
         unit * mean_s

@@ -109,7 +109,7 @@ pub(crate) fn scripted(sequence: u64) -> DwellReport {
     }
 }
 
-/// When the last of the scripted dwells ends, after [`START`] [ms].
+/// When the last of the scripted dwells ends, after [`START`] (ms).
 pub(crate) const END_MS: i64 = 5000;
 
 pub(crate) fn well() -> Health {

@@ -13,7 +13,7 @@ use fallowband::detection::verdict::{DwellReport, Levels, Reason, Reasons, State
 use fallowband::detection::window::Window;
 use fallowband::history::{History, HistoryError, Identity, Options, Reader, RunState};
 
-/// 2026-03-02T10:07:30Z: not at the border of a quarter [ms].
+/// 2026-03-02T10:07:30Z: not at the border of a quarter (ms).
 pub(crate) const BEGIN_MS: i64 = 1_772_446_050_000;
 
 /// A plan with `count` channels of 25 kHz (invented: the Lower Saltmarsh block).
@@ -152,7 +152,7 @@ impl Line {
         usize::try_from(cell).ok().and_then(|cell| self.cells.get(cell).copied().flatten())
     }
 
-    /// Time in each state over the cells `[from, to)`, unknown where nobody looked [us].
+    /// Time in each state over the cells `[from, to)`, unknown where nobody looked (us).
     pub(crate) fn sums_us(&self, from: i64, to: i64) -> [i64; 4] {
         let mut sums = [0; 4];
         for cell in from..to {

@@ -14,7 +14,7 @@ pub(crate) const CENTRE: Told =
     Told { centre_hz: Some(433e6), start: None, fallback_centre_hz: None };
 /// Nothing to say.
 pub(crate) const NOTHING: Told = Told { centre_hz: None, start: None, fallback_centre_hz: None };
-/// 2026-03-01T12:00:00Z [s].
+/// 2026-03-01T12:00:00Z (s).
 pub(crate) const NOON_S: i64 = 1_772_366_400;
 /// The same as the program keeps it.
 pub(crate) const NOON: Utc = Utc(NOON_S * 1_000_000_000);

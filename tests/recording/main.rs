@@ -16,7 +16,7 @@ use sha2::{Digest, Sha512};
 mod folder;
 mod refusals;
 
-/// A block as a row: first sample's time since the start of all on both clocks [us], length, gap.
+/// A block as a row: first sample's time since the start of all on both clocks (us), length, gap.
 type Row = (i64, i64, usize, bool);
 
 fn rows(source: &mut Recording, origin: Utc, samples_max: usize) -> Vec<Row> {

@@ -66,7 +66,7 @@ impl Blocks {
 }
 
 /// Starts capturing on a thread of its own, in blocks of at most `block_samples` [samples, 1 or
-/// more], with a queue of `depth` blocks [1 or more].
+/// more], with a queue of `depth` blocks (1 or more).
 ///
 /// # Errors
 /// [`CaptureError::Thread`]; what the source meets later is told by the state.

@@ -37,7 +37,7 @@ impl SampleFormat {
         }
     }
 
-    /// Size of one complex sample [bytes].
+    /// Size of one complex sample (bytes).
     pub(super) fn bytes_per_sample(self) -> usize {
         match self {
             SampleFormat::Ci16Le => 4,

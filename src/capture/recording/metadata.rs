@@ -26,11 +26,11 @@ const UTC_END: Utc = Utc(4_102_444_800_000_000_000);
 pub struct Annotation {
     /// Its first sample, counted from the first in the file; negative when it began before that.
     pub sample_start: i64,
-    /// Its length [samples]; `None` when it is not stated.
+    /// Its length (samples); `None` when it is not stated.
     pub sample_count: Option<u64>,
-    /// Lower edge [Hz], as stated.
+    /// Lower edge (Hz), as stated.
     pub freq_lower_edge_hz: Option<f64>,
-    /// Upper edge [Hz], as stated.
+    /// Upper edge (Hz), as stated.
     pub freq_upper_edge_hz: Option<f64>,
     /// Short label.
     pub label: Option<String>,
@@ -45,7 +45,7 @@ pub(super) struct Segment {
     pub(super) sample_start: u64,
     /// Its first sample, counted in the stream that the recorder saw.
     pub(super) global_index: Option<u64>,
-    /// Centre frequency [Hz].
+    /// Centre frequency (Hz).
     pub(super) frequency_hz: Option<f64>,
     /// When its first sample was taken.
     pub(super) datetime: Option<Utc>,

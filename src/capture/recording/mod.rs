@@ -22,15 +22,15 @@ use format::SampleFormat;
 use metadata::{Metadata, Segment, check_date, utc_text};
 use segments::{Stretch, stretches};
 
-/// How much of the data file is held at a time [bytes]; a whole number of samples in every format.
+/// How much of the data file is held at a time (bytes); a whole number of samples in every format.
 const CHUNK_BYTES: usize = 64 * 1024;
 
 /// What the user says of a recording because the recording does not.
 #[derive(Clone, Copy, Debug, Default, PartialEq)]
 pub struct Told {
-    /// Centre frequency [Hz], finite. Contradicts a recording that states another.
+    /// Centre frequency (Hz), finite. Contradicts a recording that states another.
     pub centre_hz: Option<f64>,
-    /// Centre frequency [Hz] to take where neither the recording states nor the user tells one.
+    /// Centre frequency (Hz) to take where neither the recording states nor the user tells one.
     pub fallback_centre_hz: Option<f64>,
     /// When the first sample was taken.
     pub start: Option<Utc>,

@@ -7,7 +7,7 @@
 use super::normal;
 use super::solve_upper_tail;
 
-/// `ln Gamma(a + 1) - [(a + 1/2) ln a - a + ln(2 pi)/2]` for `a > 0`: the error of Stirling's formula.
+/// `ln Gamma(a + 1) - ((a + 1/2) ln a - a + ln(2 pi)/2)` for `a > 0`: the error of Stirling's formula.
 pub(crate) fn stirling_error(a: f64) -> f64 {
     if a <= 15.0 {
         let half_ln_two_pi = 0.918_938_533_204_672_8;

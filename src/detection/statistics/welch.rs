@@ -18,7 +18,7 @@ pub struct PowerCorrelation {
 }
 
 impl PowerCorrelation {
-    /// For window values of one transform and the hop between transforms [samples].
+    /// For window values of one transform and the hop between transforms (samples).
     ///
     /// # Panics
     /// If the hop is 0 or the window is empty.
