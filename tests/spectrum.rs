@@ -66,7 +66,7 @@ fn a_full_scale_carrier_is_0_dbfs_wherever_it_falls() {
         for offset_bins in [0.0, 3.0, 17.4, -40.5] {
             let carrier: Vec<Complex32> = (0..LENGTH)
                 .map(|n| {
-                    let turns = f64::from(offset_bins) * n as f64 / LENGTH as f64;
+                    let turns = offset_bins * n as f64 / LENGTH as f64;
                     Complex32::from_polar(1.0, (std::f64::consts::TAU * turns) as f32)
                 })
                 .collect();

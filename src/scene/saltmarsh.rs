@@ -26,7 +26,7 @@ const USE_OF_CHANNELS: &str =
 /// Levels over the noise, dealt in this order to the users of each kind, lowest frequency first
 /// (dB). From below what any dwell can hear to strong; the order keeps neighbours unlike.
 const SNR_DB: [f64; 15] =
-    [12.0, -2.0, 30.0, 4.0, 60.0, -8.0, 16.0, 1.0, 40.0, -5.0, 8.0, 22.0, 6.0, 50.0, 2.5];
+    [12.0, -2.0, 30.0, 4.0, 60.0, -11.5, 16.0, 1.0, 40.0, -9.0, 8.0, 22.0, 6.0, 50.0, 2.5];
 
 impl SceneSpec {
     /// The drainage board's block as heard at Quern Mill (invented): 448.1 MHz, 2.4 MS/s, channels
