@@ -4,7 +4,7 @@
 //! been idle without a gap for the check time, and nothing was detected on it for the hold-off.
 
 use super::plan::{Band, Plan};
-use super::standing::{ChannelStanding, Standing};
+use super::standing::{CONTIGUITY_NS, ChannelStanding, Standing};
 use super::time::Stamp;
 use super::verdict::{Reasons, State};
 
@@ -95,9 +95,12 @@ fn judge(
     if protected {
         refusals.push(Refusal::Protected);
     }
-    // Half-open: evidence exactly as old as the limit is stale. A clock that runs backwards
-    // (negative age) proves nothing about freshness either.
-    let age_ns = standing.age_ns(now).filter(|age| (0..band.policy.max_age_ns).contains(age));
+    // Half-open: evidence exactly as old as the limit is stale. Evidence from the future (a clock that
+    // ran backwards) proves nothing about freshness either, but for the rounding of stamps.
+    let age_ns = standing
+        .age_ns(now)
+        .map(|age_ns| if (-CONTIGUITY_NS..0).contains(&age_ns) { 0 } else { age_ns })
+        .filter(|age_ns| (0..band.policy.max_age_ns).contains(age_ns));
     if age_ns.is_none() {
         refusals.push(Refusal::Stale);
     }
