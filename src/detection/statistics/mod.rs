@@ -9,7 +9,9 @@ pub mod gamma;
 pub mod interval;
 pub mod marcum;
 pub mod normal;
+pub mod quadratic;
 pub mod ratio;
+pub mod weights;
 pub mod welch;
 
 /// Solves `ln tail(x) = ln target` for a tail that falls with `x`, by Newton steps on the logarithm
