@@ -115,7 +115,7 @@ fn band_numbers(
     BandNumbers {
         id: band.id.clone(),
         channels,
-        bins_per_channel: layout.channels[place].span.width_bins,
+        bins_per_channel: layout.channels[place].span.bins() as f64,
         dwell_s,
         slice_s: timing.slice_samples() as f64 / rate_hz,
         slices_per_dwell: timing.slices,

@@ -6,8 +6,9 @@ use std::sync::Arc;
 use super::floor::{FloorAt, FloorFit, FloorModel};
 use super::layout::{ChannelSpan, Layout};
 use super::plan::Plan;
+use super::statistics::quadratic::GammaSum;
 use super::statistics::ratio::RatioTable;
-use super::statistics::welch::PowerCorrelation;
+use super::statistics::weights::Weights;
 use super::verdict::{Levels, Reason, Reasons, State, Verdict};
 
 /// What makes a whole dwell unfit for some or all claims.
@@ -24,36 +25,28 @@ pub struct Decision {
     model: FloorModel,
     tables: Vec<Arc<RatioTable>>,
     protection_levels_db: Vec<f64>,
-    looks: Vec<f64>,
     reference_looks: f64,
 }
 
 impl Decision {
     /// For dwells of `transforms` transforms.
-    pub fn new(
-        plan: &Plan,
-        layout: &Layout,
-        correlation: &PowerCorrelation,
-        transforms: usize,
-    ) -> Decision {
-        let looks_of = |weights: &[f64]| correlation.equivalent_looks(transforms, weights);
+    pub fn new(plan: &Plan, layout: &Layout, weights: &mut Weights, transforms: usize) -> Decision {
+        let mut energies: HashMap<usize, GammaSum> = HashMap::new();
+        let mut energy_of = |bins: usize| {
+            energies.entry(bins).or_insert_with(|| weights.energy(transforms, bins)).clone()
+        };
         let cell_looks: Vec<f64> =
-            layout.references.iter().map(|cell| looks_of(&cell.span.weights)).collect();
-        let looks: Vec<f64> =
-            layout.channels.iter().map(|channel| looks_of(&channel.span.weights)).collect();
-        let mut shared: HashMap<(i64, usize), Arc<RatioTable>> = HashMap::new();
-        let tables = layout
+            layout.references.iter().map(|cell| energy_of(cell.span.bins()).looks()).collect();
+        let mut shared: HashMap<(usize, usize), Arc<RatioTable>> = HashMap::new();
+        let tables: Vec<Arc<RatioTable>> = layout
             .channels
             .iter()
-            .zip(&looks)
-            .map(|(channel, &looks)| {
+            .map(|channel| {
                 let band_index = plan.channels[channel.channel_index].band_index;
                 let band = &plan.bands[band_index];
-                // Channels whose looks differ by under 0.05 % share a table: that moves a false-alarm
-                // probability of 1e-9 by 1 %.
-                let key = ((looks.ln() * 2000.0).round() as i64, band_index);
-                let make = || Arc::new(RatioTable::new(looks, band.pfa, band.pd));
-                shared.entry(key).or_insert_with(make).clone()
+                let bins = channel.span.bins();
+                let make = || Arc::new(RatioTable::new(energy_of(bins), band.pfa, band.pd));
+                shared.entry((bins, band_index)).or_insert_with(make).clone()
             })
             .collect();
         let protection_levels_db = layout
@@ -65,14 +58,13 @@ impl Decision {
             model: FloorModel::new(&plan.floor, &layout.references, &cell_looks),
             tables,
             protection_levels_db,
-            looks,
             reference_looks: cell_looks.iter().sum(),
         }
     }
 
     /// Equivalent looks of a channel, by its place in the layout.
     pub fn looks(&self, channel: usize) -> f64 {
-        self.looks[channel]
+        self.tables[channel].energy().looks()
     }
 
     /// Looks of all reference cells together: the most that a floor estimate can rest on.

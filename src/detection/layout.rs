@@ -2,28 +2,34 @@
 
 use super::plan::{Channel, Plan};
 
-/// A stretch of neighbouring bins, each with the share of it that counts (0 to 1).
-#[derive(Clone, Debug, PartialEq)]
+/// A stretch of neighbouring whole bins, as a half-open range by rising frequency. Bins of the DC guard
+/// inside it do not count.
+///
+/// Whole bins, so that the distribution of the energy depends on their number alone; what the edges
+/// miss or hold too much of a channel is at most half a bin each, and levels are referred to the
+/// channel's true bandwidth.
+#[derive(Clone, Debug, PartialEq, Eq)]
 pub struct BinSpan {
-    /// Index of the first bin, by rising frequency.
+    /// The first bin.
     pub first: usize,
-    /// Share of each bin, from the first on; not all 0.
-    pub weights: Vec<f64>,
-    /// Sum of the weights (bins).
-    pub width_bins: f64,
+    /// The bin after the last.
+    pub end: usize,
+    /// First bin of the DC guard within the span, and the bin after its last; equal where there is none.
+    pub guard: (usize, usize),
 }
 
 impl BinSpan {
-    /// Mean power per bin of a spectrum over the span.
-    pub fn mean_power(&self, spectrum: &[f32]) -> f64 {
-        let bins = &spectrum[self.first..self.first + self.weights.len()];
-        let sum: f64 = bins.iter().zip(&self.weights).map(|(p, w)| f64::from(*p) * w).sum();
-        sum / self.width_bins
+    /// How many bins count; at least 1.
+    pub fn bins(&self) -> usize {
+        self.end - self.first - (self.guard.1 - self.guard.0)
     }
 
-    /// Index of the bin after the last.
-    pub fn end(&self) -> usize {
-        self.first + self.weights.len()
+    /// Mean power per bin of a spectrum over the span.
+    pub fn mean_power(&self, spectrum: &[f32]) -> f64 {
+        let sum = |from: usize, to: usize| -> f64 {
+            spectrum[from..to].iter().map(|power| f64::from(*power)).sum()
+        };
+        (sum(self.first, self.guard.0) + sum(self.guard.1, self.end)) / self.bins() as f64
     }
 }
 
@@ -152,35 +158,38 @@ impl Grid {
         (bin - (self.length / 2) as f64) / self.usable_half_bins
     }
 
-    /// Share of a bin that lies in the DC guard.
+    /// Whether the DC guard reaches into a bin.
     fn in_dc_guard(&self, bin: usize) -> bool {
         let distance = (bin as f64 - (self.length / 2) as f64).abs();
         self.guard_half_bins > 0.0 && distance < self.guard_half_bins + 0.5
     }
 
+    fn span(&self, first: usize, end: usize) -> BinSpan {
+        let guarded = |bin: &usize| self.in_dc_guard(*bin);
+        let guard = match ((first..end).find(guarded), (first..end).rfind(guarded)) {
+            (Some(from), Some(last)) => (from, last + 1),
+            _ => (end, end),
+        };
+        BinSpan { first, end, guard }
+    }
+
+    /// The whole bins that come nearest to the channel: as many as its bandwidth holds, rounded, at
+    /// least one, and centred on it as well as may be.
     fn channel_span(&self, channel: &Channel) -> BinSpan {
-        let (low_hz, high_hz) = channel.edges_hz();
-        let (low, high) = (self.bin_of(low_hz), self.bin_of(high_hz));
-        // A bin reaches half a bin either side of its centre.
-        let first = (low + 0.5).floor();
-        let last = (high + 0.5).ceil() - 1.0;
+        let count = (channel.bandwidth_hz / self.bin_width_hz).round().max(1.0);
+        let first = (self.bin_of(channel.centre_hz) - 0.5 * (count - 1.0)).round();
         assert!(
-            first >= 0.0 && last < self.length as f64,
+            first >= 0.0 && first + count <= self.length as f64,
             "channel {} outside the block",
             channel.id
         );
-        let share = |bin: usize| {
-            let covered = (high.min(bin as f64 + 0.5) - low.max(bin as f64 - 0.5)).clamp(0.0, 1.0);
-            if self.in_dc_guard(bin) { 0.0 } else { covered }
-        };
-        let weights: Vec<f64> = (first as usize..=last as usize).map(share).collect();
-        let width_bins: f64 = weights.iter().sum();
-        assert!(width_bins > 0.0, "channel {} has no bin outside the DC guard", channel.id);
-        BinSpan { first: first as usize, weights, width_bins }
+        let span = self.span(first as usize, (first + count) as usize);
+        assert!(span.bins() > 0, "channel {} has no bin outside the DC guard", channel.id);
+        span
     }
 
     fn reference(&self, span: BinSpan) -> ReferenceCell {
-        let middle = span.first as f64 + 0.5 * (span.weights.len() as f64 - 1.0);
+        let middle = 0.5 * (span.first + span.end - 1) as f64;
         ReferenceCell { position: self.position(middle), span }
     }
 
@@ -193,7 +202,7 @@ impl Grid {
         let mut from = first_usable;
         for (cell, _) in channels {
             self.tile(from, cell.span.first.saturating_sub(self.separation), &mut cells);
-            from = from.max(cell.span.end() + self.separation);
+            from = from.max(cell.span.end + self.separation);
         }
         self.tile(from, end_usable, &mut cells);
         cells
@@ -211,9 +220,7 @@ impl Grid {
             if last - first < CELL_BINS_MIN {
                 return;
             }
-            let weights = vec![1.0; last - first];
-            let width_bins = weights.len() as f64;
-            cells.push(self.reference(BinSpan { first, weights, width_bins }));
+            cells.push(self.reference(self.span(first, last)));
             first = last + self.separation;
         }
     }

@@ -10,7 +10,7 @@ use super::decision::{Decision, Integrity, Scratch};
 use super::layout::Layout;
 use super::plan::Plan;
 use super::spectrum::{Spectrum, to_rising_frequency};
-use super::statistics::welch::PowerCorrelation;
+use super::statistics::weights::Weights;
 use super::time::{Stamp, samples_to_nanos};
 use super::timing::Timing;
 use super::verdict::{DwellReport, Reason};
@@ -26,7 +26,7 @@ pub struct SegmentDetector {
     timing: Timing,
     sample_rate_hz: f64,
     spectrum: Spectrum,
-    correlation: PowerCorrelation,
+    weights: Weights,
     plan: Plan,
     /// Decisions by number of slices, made when first needed; index 0 stays empty.
     decisions: Vec<Option<Box<Decision>>>,
@@ -84,7 +84,7 @@ impl SegmentDetector {
             timing,
             sample_rate_hz: plan.receiver.sample_rate_hz,
             spectrum: Spectrum::new(window, length),
-            correlation: PowerCorrelation::new(&window.values(length), timing.hop),
+            weights: Weights::new(&window.values(length), timing.hop),
             plan: plan.clone(),
             decisions: vec![None; timing.slices + 1],
             scratch: Scratch::default(),
@@ -115,9 +115,9 @@ impl SegmentDetector {
     /// The decision for a dwell of `slices` slices.
     pub fn decision(&mut self, slices: usize) -> &Decision {
         let transforms = slices * self.timing.transforms_per_slice;
-        let (plan, layout, correlation) = (&self.plan, &self.layout, &self.correlation);
+        let (plan, layout, weights) = (&self.plan, &self.layout, &mut self.weights);
         self.decisions[slices]
-            .get_or_insert_with(|| Box::new(Decision::new(plan, layout, correlation, transforms)))
+            .get_or_insert_with(|| Box::new(Decision::new(plan, layout, weights, transforms)))
     }
 
     /// Takes in a block and hands every dwell that it completes to `sink`. A gap ends the dwell in

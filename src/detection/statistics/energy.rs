@@ -1,7 +1,7 @@
 //! The energy detector with a known noise floor: closed forms for threshold and error rates.
 //!
 //! `looks` is the number of independent complex values averaged (or the equivalent number, see
-//! [`super::welch`]); a threshold is a ratio to the mean noise power; SNR is signal over noise power.
+//! [`super::weights`]); a threshold is a ratio to the mean noise power; SNR is signal over noise power.
 
 use super::gamma;
 use super::marcum::generalised_q;

@@ -12,7 +12,6 @@ pub mod normal;
 pub mod quadratic;
 pub mod ratio;
 pub mod weights;
-pub mod welch;
 
 /// Solves `ln tail(x) = ln target` for a tail that falls with `x`, by Newton steps on the logarithm
 /// kept inside a shrinking bracket.
@@ -40,7 +39,7 @@ pub(crate) fn solve_upper_tail(target: f64, start: f64, tail: impl Fn(f64) -> (f
         if !(next > low && next < high) {
             next = if high.is_finite() { 0.5 * (low + high) } else { 2.0 * x };
         }
-        if (next - x).abs() <= 4.0 * f64::EPSILON * x {
+        if (next - x).abs() <= 1e-13 * x {
             return next;
         }
         x = next;

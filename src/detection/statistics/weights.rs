@@ -29,8 +29,8 @@ use super::quadratic::{GammaSum, Term};
 /// Gamma variates that weights are condensed into.
 pub const NODES: usize = 8;
 
-/// Largest matrix whose eigenvalues are computed as such.
-const DIRECT_MAX: usize = 160;
+/// Largest matrix whose eigenvalues are taken one by one.
+const DIRECT_MAX: usize = 40;
 
 /// Correlations below this share of the power count as none when the band's width is measured.
 const BAND_EDGE: f64 = 1e-8;
@@ -90,17 +90,10 @@ impl Weights {
     /// If either is 0.
     pub fn energy(&mut self, transforms: usize, bins: usize) -> GammaSum {
         assert!(transforms > 0 && bins > 0, "{transforms} transforms, {bins} bins");
-        let scale = 1.0 / (transforms * bins) as f64;
         if transforms * bins <= DIRECT_MAX {
-            let eigenvalues = self.measure(transforms, bins);
-            let largest = eigenvalues.iter().copied().fold(0.0, f64::max);
-            let terms = eigenvalues
-                .iter()
-                .filter(|weight| **weight > 1e-12 * largest)
-                .map(|weight| Term { scale: weight * scale, shape: 1.0 })
-                .collect();
-            return GammaSum::new(terms);
+            return self.all_eigenvalues(transforms, bins);
         }
+        let scale = 1.0 / (transforms * bins) as f64;
         let measure = self.extrapolated(transforms, bins);
         let trace = (transforms * bins) as f64;
         let terms = condense(&measure, trace)
@@ -110,10 +103,17 @@ impl Weights {
         GammaSum::new(terms)
     }
 
-    pub fn direct(&mut self, transforms: usize, bins: usize) -> GammaSum {
-        let e = self.measure(transforms, bins);
+    /// As [`Weights::energy`], from every eigenvalue whatever the size: time grows with its cube.
+    pub fn all_eigenvalues(&mut self, transforms: usize, bins: usize) -> GammaSum {
         let scale = 1.0 / (transforms * bins) as f64;
-        GammaSum::new(e.iter().filter(|w| **w > 1e-12).map(|w| Term { scale: w * scale, shape: 1.0 }).collect())
+        let eigenvalues = self.measure(transforms, bins);
+        let largest = eigenvalues.iter().copied().fold(0.0, f64::max);
+        let terms = eigenvalues
+            .iter()
+            .filter(|weight| **weight > 1e-12 * largest)
+            .map(|weight| Term { scale: weight * scale, shape: 1.0 })
+            .collect();
+        GammaSum::new(terms)
     }
 
     /// Eigenvalues of a box.
@@ -199,6 +199,20 @@ fn condense(measure: &[(f64, f64)], trace: f64) -> Vec<(f64, f64)> {
         }
         norm_before = norm;
     }
+    // The smallest nodes can fall below 0, where the signed multiplicities do not carry any further;
+    // a leading part of the matrix is the quadrature with fewer nodes.
+    (1..=diagonal.len())
+        .rev()
+        .find_map(|size| quadrature(&diagonal[..size], &off_diagonal[..size - 1]))
+        .expect("the mean of positive weights is positive")
+        .into_iter()
+        .map(|(node, share)| (node * unit, share * trace / (node * unit)))
+        .collect()
+}
+
+/// Nodes and masses (summing to 1) of the Gauss quadrature with the given recurrence coefficients;
+/// `None` where a node is not positive.
+fn quadrature(diagonal: &[f64], off_diagonal: &[f64]) -> Option<Vec<(f64, f64)>> {
     let size = diagonal.len();
     let jacobi = DMatrix::from_fn(size, size, |row, column| match row.abs_diff(column) {
         0 => diagonal[row],
@@ -206,12 +220,7 @@ fn condense(measure: &[(f64, f64)], trace: f64) -> Vec<(f64, f64)> {
         _ => 0.0,
     });
     let eigen = jacobi.symmetric_eigen();
-    (0..size)
-        .filter(|&j| eigen.eigenvalues[j] > 1e-9)
-        .map(|j| {
-            let weight = eigen.eigenvalues[j] * unit;
-            let mass = eigen.eigenvectors[(0, j)].powi(2) * trace;
-            (weight, mass / weight)
-        })
-        .collect()
+    let nodes = (0..size).map(|j| (eigen.eigenvalues[j], eigen.eigenvectors[(0, j)].powi(2)));
+    let nodes: Vec<(f64, f64)> = nodes.collect();
+    nodes.iter().all(|(node, _)| *node > 1e-6).then_some(nodes)
 }
