@@ -183,7 +183,8 @@ fn two_digits(value: f64) -> String {
     if value >= 9.95 || value <= 0.0 {
         return format!("{value:.0}");
     }
-    let decimals = (1.0 - value.log10().floor()).clamp(1.0, 12.0) as usize;
+    // What rounds up to the next power of ten counts as one.
+    let decimals = (1.0 - (1.005 * value).log10().floor()).clamp(1.0, 12.0) as usize;
     format!("{value:.decimals$}")
 }
 

@@ -25,10 +25,7 @@ pub(super) fn run(config: &Path) -> Result<(), Failure> {
         data: format!("{file}: node.data_directory"),
     };
     let seed = 0;
-    serve(&configuration, configuration.listen, seed, &named, |address| {
-        tracing::info!("serving on http://{address}/");
-        Ok(())
-    })
+    serve(&configuration, configuration.listen, seed, &named, |_address| Ok(()))
 }
 
 /// Logs to standard error; `RUST_LOG` sets the level (default `info`).
@@ -78,6 +75,7 @@ pub(super) fn serve(
             daemon.stop();
             return Err(failure);
         }
+        tracing::info!("serving on http://{address}/");
         let shutdown = async move {
             tokio::select! {
                 _ = interrupt.recv() => {}
