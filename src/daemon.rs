@@ -194,8 +194,8 @@ impl Daemon {
         self.state.clone()
     }
 
-    /// Serves until `shutdown` completes, then stops in the order of the flow, so that the last dwell
-    /// is decided and the last run is committed.
+    /// Serves until `shutdown` completes, then stops in the order of the flow, so that the last
+    /// dwell is decided and the last run is committed.
     pub async fn serve(
         self,
         listener: TcpListener,

@@ -1,7 +1,7 @@
 //! The command line as its first user meets it: the real program, real files, real sockets.
 //!
-//! Exit codes are those that `--help` lists; the numbers are from the BSD `sysexits.h` (from memory).
-//! The site, its channels and all recordings are invented.
+//! Exit codes are those that `--help` lists; the numbers are from the BSD `sysexits.h` (from
+//! memory). The site, its channels and all recordings are invented.
 
 #[path = "command/arguments.rs"]
 mod arguments;

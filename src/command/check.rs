@@ -23,7 +23,7 @@ pub(super) struct CheckArguments {
 
 pub(super) fn check(arguments: &CheckArguments) -> Result<(), Failure> {
     let configuration = Configuration::load(&arguments.config)?;
-    // What the source really delivers decides, where there is one; a replay's configuration has none.
+    // What the source really delivers decides; the configuration of a replay has none.
     let (centre_hz, sample_rate_hz) = match configuration.source {
         Some(_) => {
             let source = open_source(&configuration, Utc(0), 0)?;

@@ -147,7 +147,7 @@ fn band_numbers(
 }
 
 /// The levels of each of the segment's channels in a dwell without any signal. Thresholds relative
-/// to the floor are then those of every idle dwell: its own decision is asked, not a formula beside.
+/// to the floor are then those of every idle dwell: the decision itself is asked.
 fn idle_dwell(plan: &Plan, segment: &mut SegmentDetector) -> Vec<Option<Levels>> {
     let slices = segment.timing().slices;
     let spectrum = vec![1.0; plan.spectrum.transform_length];

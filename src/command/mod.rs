@@ -24,8 +24,8 @@ use crate::config::quantity;
 use crate::daemon::StartError;
 use crate::detection::time::Utc;
 
-/// Watches a block of spectrum and tells which of its channels a secondary radio may use now, for how
-/// long that holds, and how they were occupied before.
+/// Watches a block of spectrum and tells which of its channels a secondary radio may use now, for
+/// how long that holds, and how they were occupied before.
 #[derive(Parser)]
 #[command(name = "fallowband", version, after_help = EXIT_CODES)]
 struct Arguments {
@@ -34,8 +34,8 @@ struct Arguments {
 }
 
 const EXIT_CODES: &str = "\
-Exit codes: 0 done, 64 wrong arguments, 65 a recording that cannot be used, 69 an address that cannot
-be served on, 70 a fault of the program, 73 a file or database that cannot be written, 78 a
+Exit codes: 0 done, 64 wrong arguments, 65 a recording that cannot be used, 69 an address that
+cannot be served on, 70 a fault of the program, 73 a file or database that cannot be written, 78 a
 configuration that is wrong. Every fault is one line on standard error.
 
 A measurement is no licence to transmit, and a receiver cannot hear a hidden node.";

@@ -40,8 +40,8 @@ pub(super) fn start_logging() {
         .init();
 }
 
-/// Starts the daemon, calls `ready` with the address that it serves on, and runs until it is told to
-/// stop by SIGINT or SIGTERM.
+/// Starts the daemon, calls `ready` with the address that it serves on, and runs until it is told
+/// to stop by SIGINT or SIGTERM.
 pub(super) fn serve(
     configuration: &Configuration,
     listen: SocketAddr,

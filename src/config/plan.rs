@@ -247,8 +247,8 @@ fn transform_length(
     }
 }
 
-/// All bins that a channel reaches into must exist. Bins are centred on multiples of their width, so
-/// that the highest ends half a bin below half the sample rate; half of the lowest lies beyond it.
+/// All bins that a channel reaches into must exist. Bins are centred on multiples of their width:
+/// the highest ends half a bin below half the sample rate; half of the lowest lies beyond it.
 fn channel_has_its_bins(
     channel: &Channel,
     receiver: &Receiver,

@@ -83,8 +83,9 @@ fn threshold_and_sensitivity_are_those_of_one_and_the_same_floor() {
     assert!((2.0 * looks..11.0 * looks).contains(&floor_looks), "{floor_looks} for {looks}");
     let snr_db = 10.0 * ratio::required_snr(looks, floor_looks, threshold, pd).log10();
     let stated_db = number(band, "sensitivity_over_floor_db");
-    // The program interpolates in a table that is good to 1e-4 of the ratio; a required SNR of -6 dB
-    // is a ratio of 1.25, so the table moves it by 5e-4 of itself: 0.002 dB, and as much for the root.
+    // The program interpolates in a table that is good to 1e-4 of the ratio; a required SNR of
+    // -6 dB is a ratio of 1.25, so the table moves it by 5e-4 of itself: 0.002 dB, and as much for
+    // the root.
     assert!((snr_db - stated_db).abs() < 0.005, "{snr_db} {stated_db}");
     let floor_max_db = number(band, "floor_max_db");
     assert!((floor_max_db - (-50.0 - stated_db)).abs() < 1e-9);
@@ -106,7 +107,7 @@ fn a_replay_of_noise_has_the_threshold_and_the_sensitivity_that_check_states() {
         levels.sort_by(f64::total_cmp);
         levels[levels.len() / 2]
     };
-    // Lines are rounded to 0.001 dB. Excision drops 1 % of idle cells, so that most dwells keep all.
+    // Lines are rounded to 0.001 dB. Excision drops 1 % of idle cells: most dwells keep all.
     for (key, stated) in [
         ("threshold_db", number(band, "threshold_over_floor_db")),
         ("sensitivity_db", number(band, "sensitivity_over_floor_db")),

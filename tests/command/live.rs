@@ -1,4 +1,5 @@
-//! `run` and `demo` alive: answers, the end of a recording, stops of every kind, and the history after.
+//! `run` and `demo` alive: answers, the end of a recording, stops of every kind, and the history
+//! after them.
 
 use std::fs;
 use std::io::{BufRead, BufReader};

@@ -127,7 +127,7 @@ fn every_line_is_whole_dwells_join_and_the_summary_is_the_sum_of_the_lines() {
 fn a_gap_in_the_recording_is_in_no_line_and_in_no_sum() {
     let folder = Folder::new(NODE);
     let captures = json!([
-        {"core:sample_start": 0, "core:frequency": 448.1e6, "core:datetime": "2026-05-04T06:30:00Z"},
+        usual_captures()[0],
         {"core:sample_start": 72_000, "core:datetime": "2026-05-04T06:30:05Z"},
     ]);
     folder.record("site", "ci16_le", &noise(48_000.0, 3.0), 48_000.0, captures);

@@ -1,5 +1,5 @@
-//! What the command tests share: a folder with a configuration and recordings, the program run to its
-//! end or as a daemon, and a plain HTTP question.
+//! What the command tests share: a folder with a configuration and recordings, the program run to
+//! its end or as a daemon, and a plain HTTP question.
 
 use std::fs;
 use std::io::{BufRead, BufReader, Read, Write};
@@ -265,8 +265,8 @@ impl Node {
         self.end_by("-TERM")
     }
 
-    /// Sends it a signal and waits for its end: how it ended, what it logged since it served, and how
-    /// long it took.
+    /// Sends it a signal and waits for its end: how it ended, what it logged since it served, and
+    /// how long it took.
     pub(crate) fn end_by(mut self, signal: &str) -> (ExitStatus, String, Duration) {
         let begun = Instant::now();
         let id = self.child.0.id().to_string();
