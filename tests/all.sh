@@ -52,8 +52,8 @@ fi
 # SQLite is compiled from its source.
 has cc || install gcc libc6-dev || printf '\n== no C compiler: the build will fail\n'
 
-has chromium || install chromium || true
-if has chromium; then
+has chromium || has chromium-browser || install chromium || true
+if has chromium || has chromium-browser; then
     FALLOWBAND_REQUIRE_BROWSER=1
     export FALLOWBAND_REQUIRE_BROWSER
 else
