@@ -4,7 +4,7 @@
 //! and the answers' small runtime. Each hands values on and never waits for the next one: a full
 //! queue costs the newest block or report, which is counted and becomes `unknown`.
 
-use std::path::Path;
+use std::path::{Path, PathBuf};
 use std::sync::atomic::{AtomicI64, AtomicU64, Ordering};
 use std::sync::{Arc, Mutex, PoisonError};
 use std::thread::JoinHandle;
@@ -54,14 +54,14 @@ pub const VERSION: &str = env!("CARGO_PKG_VERSION");
 pub enum StartError {
     /// The configuration does not fit the source.
     Config(ConfigError),
-    /// The source cannot be opened.
-    Capture(CaptureError),
+    /// The recording that the configuration (named first) gives cannot be used.
+    Recording(String, CaptureError),
+    /// The operating system gave no thread for this.
+    Thread(&'static str, String),
     /// The data directory or the database in it cannot be used.
     History(HistoryError),
     /// The data directory cannot be made.
-    Directory(std::path::PathBuf, std::io::Error),
-    /// The address is not to be had.
-    Listen(std::net::SocketAddr, std::io::Error),
+    Directory(PathBuf, std::io::Error),
     /// The configuration names no source.
     NoSource(String),
 }
@@ -70,13 +70,14 @@ impl std::fmt::Display for StartError {
     fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
         match self {
             StartError::Config(error) => error.fmt(f),
-            StartError::Capture(error) => error.fmt(f),
+            StartError::Recording(file, error) => write!(f, "{file}: receiver.recording: {error}"),
+            StartError::Thread(what, error) => write!(f, "no thread for {what}: {error}"),
             StartError::History(error) => error.fmt(f),
-            StartError::Directory(path, error) => {
-                write!(f, "{}: the data directory cannot be made: {error}", path.display())
+            StartError::Directory(path, error) if path.is_file() => {
+                write!(f, "{} is a file, not a folder ({error})", path.display())
             }
-            StartError::Listen(address, error) => {
-                write!(f, "api.listen: cannot listen on {address}: {error}")
+            StartError::Directory(path, error) => {
+                write!(f, "{}: the folder cannot be made: {error}", path.display())
             }
             StartError::NoSource(file) => {
                 write!(f, "{file}: receiver.source: missing; give \"scene\" or \"recording\"")
@@ -93,7 +94,7 @@ pub fn block_samples(sample_rate_hz: f64) -> usize {
 /// Opens the source that a configuration names; `start` is the present moment, `seed` a scene's.
 ///
 /// # Errors
-/// [`StartError::NoSource`] or [`StartError::Capture`].
+/// [`StartError::NoSource`] or [`StartError::Recording`].
 pub fn open_source(
     configuration: &Configuration,
     start: Utc,
@@ -108,7 +109,8 @@ pub fn open_source(
         Some(config::Source::Recording { path }) => {
             let fallback_centre_hz = configuration.centre_hz();
             let told = Told { fallback_centre_hz, ..Told::default() };
-            let recording = Recording::open(path, told).map_err(StartError::Capture)?;
+            let recording = Recording::open(path, told)
+                .map_err(|error| StartError::Recording(configuration.file.clone(), error))?;
             Ok(Box::new(recording))
         }
         None => Err(StartError::NoSource(configuration.file.clone())),
@@ -143,12 +145,15 @@ impl Daemon {
         let plan = configuration
             .plan(Some(source.centre_hz()), Some(source.sample_rate_hz()))
             .map_err(StartError::Config)?;
+        for warning in configuration.warnings(&plan) {
+            tracing::warn!("{}: {warning}", configuration.file);
+        }
         let plan = Arc::new(plan);
         let History { writer, reader, health } = open_history(configuration, &plan)?;
         let source = Box::new(Paced::new(source, Arc::clone(&clock)));
         let samples = block_samples(plan.receiver.sample_rate_hz);
         let (blocks, capture) = queue::spawn(source, samples, QUEUE_BLOCKS, WhenFull::Drop)
-            .map_err(StartError::Capture)?;
+            .map_err(|error| StartError::Thread("capture", error.to_string()))?;
         let standing = Standing::new(&plan);
         let (publish, live) = watch::channel(Arc::new(Live { standing, newest: None }));
         let progress = Arc::new(Progress::default());
@@ -160,7 +165,7 @@ impl Daemon {
             std::thread::Builder::new()
                 .name("detection".to_owned())
                 .spawn(move || task.run(blocks, &status))
-                .map_err(|error| StartError::Capture(CaptureError::Thread(error)))?
+                .map_err(|error| StartError::Thread("detection", error.to_string()))?
         };
         let watched = Watched { capture: capture.status(), progress, history: health };
         let late_after_s = longest_max_age_s(&plan);
@@ -189,35 +194,46 @@ impl Daemon {
         self.state.clone()
     }
 
-    /// Serves until `shutdown` completes, then stops in the order of the flow, so that the last dwell
-    /// is decided and the last run is committed.
+    /// Serves until `shutdown` completes, then stops in the order of the flow, so that the last
+    /// dwell is decided and the last run is committed.
     pub async fn serve(
         self,
         listener: TcpListener,
         shutdown: impl Future<Output = ()> + Send + 'static,
-    ) {
+    ) -> Stopped {
         crate::answers::serve(listener, self.state.clone(), shutdown).await;
-        self.stop();
+        self.stop()
     }
 
     /// Stops capture, detection and history, in this order.
-    pub fn stop(self) {
+    pub fn stop(self) -> Stopped {
         self.capture.status().stop();
-        let ended = self.capture.join();
-        if let CaptureState::Failed(message) = ended {
+        if let CaptureState::Failed(message) = self.capture.join() {
             tracing::error!("capture had failed: {message}");
         }
-        if self.detection.join().is_err() {
-            tracing::error!("the detection thread had panicked");
-        }
+        let panicked = self.detection.join().is_err();
         let writer = self.writer.lock().unwrap_or_else(PoisonError::into_inner).take();
-        if let Some(writer) = writer {
-            let health = writer.close();
-            if let Some(message) = health.message {
-                tracing::error!("the last commit failed: {message}");
+        let history = writer.map(Writer::close);
+        match history.filter(|health| health.state == HistoryState::Stopped) {
+            Some(health) => {
+                let why = health.message.unwrap_or_default();
+                Stopped::HistoryLost(format!("the end of the history is not written: {why}"))
             }
+            None if panicked => Stopped::Panicked,
+            None => Stopped::Well,
         }
     }
+}
+
+/// How a daemon has stopped.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub enum Stopped {
+    /// Everything that was observed is on the record.
+    Well,
+    /// The last commit failed, for the reason given.
+    HistoryLost(String),
+    /// The detection thread had panicked.
+    Panicked,
 }
 
 fn open_history(configuration: &Configuration, plan: &Plan) -> Result<History, StartError> {
@@ -252,10 +268,15 @@ impl Detection {
     fn run(self, mut blocks: Blocks, status: &CaptureStatus) {
         let mut detector = Detector::new(&self.plan);
         let mut standing = Standing::new(&self.plan);
+        let mut first = true;
         loop {
             match blocks.next(POLL) {
                 Next::Block(block) => {
                     self.progress.sample_at(self.clock.now().monotonic_ns);
+                    // The first block of all follows on nothing, and misses nothing.
+                    if block.gap_before && !std::mem::take(&mut first) {
+                        self.progress.loss_at(block.start.monotonic_ns);
+                    }
                     detector.push(block, |report| self.publish(report, &mut standing));
                 }
                 Next::Nothing => {}
@@ -263,8 +284,9 @@ impl Detection {
             }
         }
         detector.finish(|report| self.publish(report, &mut standing));
-        if let CaptureState::Failed(message) = status.state() {
-            tracing::error!("capture failed: {message}");
+        match status.state() {
+            CaptureState::Failed(message) => tracing::error!("capture failed: {message}"),
+            _ => tracing::info!("capture has ended: every channel is unknown from here on"),
         }
     }
 
@@ -289,11 +311,16 @@ struct Progress {
     dwells: AtomicU64,
     last_sample_ns: AtomicI64,
     last_dwell_ns: AtomicI64,
+    last_loss_ns: AtomicI64,
 }
 
 impl Progress {
     fn sample_at(&self, monotonic_ns: i64) {
         self.last_sample_ns.store(monotonic_ns.max(1), Ordering::Relaxed);
+    }
+
+    fn loss_at(&self, monotonic_ns: i64) {
+        self.last_loss_ns.store(monotonic_ns.max(1), Ordering::Relaxed);
     }
 
     fn dwell_at(&self, monotonic_ns: i64) {
@@ -330,7 +357,7 @@ impl Watched {
                 gaps: counts.gaps,
                 blocks_dropped: counts.blocks_dropped,
                 last_sample_age_s: age_s(&self.progress.last_sample_ns),
-                last_loss_age_s: None,
+                last_loss_age_s: age_s(&self.progress.last_loss_ns),
             },
             detection: DetectionHealth {
                 dwells: self.progress.dwells.load(Ordering::Relaxed),

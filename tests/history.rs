@@ -10,9 +10,13 @@ mod keeper;
 #[path = "history/support.rs"]
 mod support;
 
+use std::path::Path;
+
 use fallowband::detection::time::Utc;
 use fallowband::detection::verdict::{Reason, Reasons};
-use fallowband::history::{History, HistoryState, Identity, Reader, RunState};
+use fallowband::history::{
+    History, HistoryState, Identity, QUARTER_ROW_BYTES, RUN_ROW_BYTES, Reader, RunState,
+};
 use rand_core::{Rng, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
 use support::*;
@@ -348,4 +352,49 @@ fn a_question_that_would_exhaust_memory_is_refused_in_one_line() {
     assert!(error.to_string().contains("shorter range"), "{error}");
     let day = history.reader.quarters(None, at(0), at(86_400_000), at(86_400_000)).unwrap();
     assert_eq!(day.len(), 500);
+}
+
+/// Bytes per row of a table: all its pages, interior ones included, by SQLite's own account.
+fn bytes_per_row(path: &Path, table: &str) -> f64 {
+    let connection = rusqlite::Connection::open(path).unwrap();
+    let number = |sql: &str| connection.query_row(sql, [], |row| row.get::<_, i64>(0)).unwrap();
+    let bytes = number(&format!("SELECT sum(pgsize) FROM dbstat WHERE name = '{table}'"));
+    let rows = number(&format!("SELECT count(*) FROM {table}"));
+    println!("{table}: {rows} rows, {:.1} bytes each", bytes as f64 / rows as f64);
+    bytes as f64 / rows as f64
+}
+
+#[test]
+fn a_row_takes_the_space_that_is_stated() {
+    const CHANNELS: usize = 90;
+    const DWELL_MS: i64 = 2_000;
+    let folder = tempfile::tempdir().unwrap();
+    let path = folder.path().join("history.sqlite3");
+    // How many reports go into a commit does not matter: one commit for each gave 47.3 and 37.5.
+    let history = open(&path, CHANNELS).unwrap();
+    // Two days, invented: every channel changes its state about 40 times an hour, as with 20
+    // transmissions, and now and then a dwell is unknown. Runs of all channels end in the order of
+    // time, so that rows come in between those of other channels, as in a node at work.
+    let seed = 20_260_504;
+    println!("seed {seed}");
+    let mut dice = Dice(Xoshiro256PlusPlus::seed_from_u64(seed));
+    let mut states = [RunState::Idle; CHANNELS];
+    for dwell in 0..2 * 86_400_000 / DWELL_MS {
+        let verdicts = states.iter_mut().enumerate().map(|(channel, state)| {
+            if dice.below(3_600_000 / DWELL_MS) < 40 {
+                let occupied = *state == RunState::Occupied;
+                *state = if occupied { RunState::Idle } else { RunState::Occupied };
+            }
+            let state = if dice.below(20_000) == 0 { RunState::Unknown } else { *state };
+            verdict(channel, state, -80.0 - dice.below(1_000) as f64 / 77.0)
+        });
+        history.writer.offer(report(dwell * DWELL_MS, DWELL_MS, verdicts.collect()));
+    }
+    let health = history.writer.close();
+    assert_eq!((health.dropped_reports, health.dropped_runs), (0, 0));
+    for (table, stated) in [("run", RUN_ROW_BYTES), ("quarter", QUARTER_ROW_BYTES)] {
+        let measured = bytes_per_row(&path, table);
+        let share = measured / stated;
+        assert!((0.75..1.25).contains(&share), "{table}: {measured:.1}, stated {stated}");
+    }
 }

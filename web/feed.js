@@ -2,14 +2,15 @@
 // A feed never presents an old answer as a new one: its age counts from when the question was
 // asked, and an answer whose own clock stands still does not count as an answer.
 
+const SECOND_MS = 1000;
 const TIMEOUT_MS = 2500;
 
 /** One resource of the node, polled. */
 export class Feed {
   /**
-   * `path` gives the resource, as a function called before each question; `periodMs` the time from
-   * question to question; `staleMs` the age at which the answer stops being current;
-   * `onAnswer` gets each answer.
+   * `path` gives the resource, as a function called before each question, or null when there is
+   * nothing to ask; `periodMs` the time from question to question; `staleMs` the age at which the
+   * answer stops being current; `onAnswer` gets each answer.
    */
   constructor(path, periodMs, staleMs, onAnswer) {
     this.path = path;
@@ -45,11 +46,15 @@ export class Feed {
     clearTimeout(this.timer);
     this.asking = true;
     const asked = moment();
+    const path = this.path();
+    let answer = null;
     try {
-      this.take(await question(this.path()), asked);
+      answer = path === null ? null : await question(path);
+      this.take(answer, asked);
     } finally {
       this.asking = false;
-      const wait = Math.max(100, this.periodMs - since(asked));
+      const periodMs = answer === null ? Math.max(SECOND_MS, this.periodMs) : this.periodMs;
+      const wait = Math.max(100, periodMs - since(asked));
       this.timer = setTimeout(() => this.ask(), wait);
     }
   }

@@ -1,17 +1,23 @@
 // The picture of the last day: time from left to right, one channel a row, drawn as a stroke that
-// is the thicker the more of the quarter hour was occupied. What is unknown is hatched, and a
-// stretch without a record is hatched too. The drawing is vectors, so it prints as sharp as text.
+// is the thicker the more of each stretch was occupied. What is unknown is hatched, and a stretch
+// without a record is hatched too; what is yet to come is bare paper, without the ground on which
+// idle is drawn. The drawing is vectors, so it prints as sharp as text.
 
-import { QUARTER_MS, addUp } from "./record.js";
+import { addUp } from "./record.js";
 import { byId, make, setAttribute, setText } from "./dom.js";
 import {
-  duration, megahertz, percent, quarterHour, utcDay, utcMinute,
+  duration, megahertz, percent, stretch, stretchName, utcDay, utcMinute, utcTime,
 } from "./text.js";
 
-const HOUR_MS = 60 * 60 * 1000;
+const MINUTE_MS = 60 * 1000;
+const HOUR_MS = 60 * MINUTE_MS;
 const TEN = 10;
-// A share of unknown up to this is left unmarked: a lost dwell or two in a quarter hour.
+// Unknown up to this share, or up to this time [s], is left unmarked: a lost dwell or two.
 const SOME_UNKNOWN = 0.02;
+const SOME_UNKNOWN_S = 0.5;
+// For a picture of this length [ms], a mark on the time axis every so often [ms].
+const TICKS = [[15, 3], [60, 10], [180, 30], [360, 60], [720, 120], [1440, 180]]
+  .map(([lengthMinutes, everyMinutes]) => [lengthMinutes * MINUTE_MS, everyMinutes * MINUTE_MS]);
 const SVG = "http://www.w3.org/2000/svg";
 
 export class Lately {
@@ -31,9 +37,13 @@ export class Lately {
   /** Draws the record anew for these channels, in this order. */
   update(channels) {
     this.channels = channels;
-    if (channels.length === 0 || this.record.newestMs === null) return;
-    this.draw();
-    this.tell();
+    if (channels.length === 0) return;
+    if (this.record.shown() !== null) {
+      this.draw();
+      this.tell();
+    } else if (this.record.sheet !== null) {
+      setText(byId("lately-line"), "Nothing is on record yet; the first of it comes in moments.");
+    }
   }
 
   /** Marks the row of the channel whose detail is open. */
@@ -43,20 +53,24 @@ export class Lately {
   }
 
   draw() {
-    if (this.channels.length === 0 || this.record.newestMs === null) return;
-    const layout = lay(this.channels, this.record.stretch(), this.chart.parentElement.clientWidth);
+    const shown = this.record.shown();
+    if (this.channels.length === 0 || shown === null) return;
+    const layout = lay(this.channels, shown, this.chart.parentElement.clientWidth);
     if (layout === null) return;
     this.layout = layout;
     setAttribute(this.chart, "viewBox", `0 0 ${layout.width} ${layout.height}`);
     setAttribute(this.chart, "data-drawn", "");
-    setBox(byId("chart-ground"), layout.left, layout.top, layout.plotWidth,
-      layout.bottom - layout.top);
+    const { left, top, bottom, plotWidth } = layout;
+    setBox(byId("chart-frame"), left, top, plotWidth, bottom - top);
+    const groundMs = [layout.beginMs, Math.max(layout.beginMs, layout.toMs)];
+    const [from, to] = groundMs.map((ms) => layout.x(ms));
+    setBox(byId("chart-ground"), from, top, to - from, bottom - top);
     for (const [id, path] of Object.entries(strokes(this.record, layout))) {
       setAttribute(byId(id), "d", path);
     }
     setAttribute(byId("chart-rules"), "d", rules(layout));
     const now = layout.x(layout.toMs).toFixed(1);
-    setAttribute(byId("chart-now"), "d", `M${now} ${layout.top - 3}V${layout.bottom + 3}`);
+    setAttribute(byId("chart-now"), "d", `M${now} ${top - 3}V${bottom + 3}`);
     byId("chart-labels").replaceChildren(...labels(layout));
     this.drawMark();
   }
@@ -85,46 +99,51 @@ export class Lately {
     const column = Math.floor((x - layout.left) / layout.plotWidth * layout.columns);
     const channel = this.channels[row];
     const inside = channel !== undefined && column >= 0 && column < layout.columns;
-    const startMs = layout.fromMs + column * QUARTER_MS;
-    const quarter = inside ? this.record.quarter(channel.id, startMs) : null;
-    markAbsent(byId("chart-cursor"), quarter === null);
-    if (quarter === null) return;
-    setBox(byId("chart-cursor"), layout.x(startMs), layout.y(row),
-      layout.plotWidth / layout.columns, layout.rowHeight);
-    setText(byId("readout"), readoutWords(channel.id, startMs, quarter));
+    const startMs = layout.fromMs + column * layout.stepMs;
+    const cell = inside ? this.record.cell(channel.id, startMs) : null;
+    markAbsent(byId("chart-cursor"), cell === null);
+    if (cell === null) return;
+    const [from, to] = [layout.x(cell.fromMs), layout.x(cell.toMs)];
+    setBox(byId("chart-cursor"), from, layout.y(row), to - from, layout.rowHeight);
+    setText(byId("readout"), readoutWords(channel.id, startMs, layout.stepMs, cell));
   }
 
   /** The headline and the table. */
   tell() {
-    const { fromMs, endMs, toMs, firstMs } = this.record.stretch();
-    const totals = this.channels.map((channel) => this.record.total(channel.id, fromMs));
+    const shown = this.record.shown();
+    const totals = this.channels.map((channel) => this.record.total(channel.id));
     const all = addUp(totals);
     const busiest = this.channels.map((channel, index) => [channel.id, totals[index].occupancy])
       .filter(([, occupancy]) => occupancy !== null && occupancy > 0)
       .sort((a, b) => b[1] - a[1]).slice(0, 3)
       .map(([id, occupancy]) => `${id} (${percent(occupancy)})`).join(", ");
-    const begins = firstMs >= endMs ? " Nothing is on record yet."
-      : firstMs > fromMs ? ` The record begins at ${quarterHour(firstMs)}.` : "";
     const occupied = all.occupancy === null ? "Nothing is known"
       : `Occupied ${percent(all.occupancy)} of the known time`;
-    const hours = Math.round((endMs - fromMs) / HOUR_MS);
-    setText(byId("lately-line"), `${occupied} in the ${hours}\u00a0h to `
-      + `${utcMinute(toMs)} UTC; ${percent(all.unknown_share)} of all time unknown.`
-      + (busiest ? ` Busiest: ${busiest}.` : "") + begins);
+    const unknown = all.unknown_s > 0 ? `${percent(all.unknown_share)} of all time unknown`
+      : "nothing unknown";
+    setText(byId("lately-line"), `${occupied} ${period(shown)}; ${unknown}.`
+      + (busiest ? ` Busiest: ${busiest}.` : ""));
+    setText(byId("lately-step"), stretchName(shown.stepMs));
     fillTable(this.channels, totals);
   }
 }
 
-function readoutWords(id, startMs, quarter) {
-  const occupied = quarter.occupancy === null ? "occupancy not known"
-    : `occupied ${percent(quarter.occupancy)} of the known time`;
-  const own = quarter.own_s > 0 ? `, own ${duration(quarter.own_s)}` : "";
-  return `${id}, ${quarterHour(startMs)}: ${occupied}, `
-    + `unknown ${percent(quarter.unknown_share)}${own}.`;
+/** The time that a picture covers, in words. */
+function period({ fromMs, endMs, beginMs, toMs, young }) {
+  if (!young) return `in the ${(endMs - fromMs) / HOUR_MS}\u00a0h to ${utcMinute(toMs)} UTC`;
+  return `from ${utcTime(beginMs)} UTC, where the record begins, to ${utcTime(toMs)}`;
+}
+
+function readoutWords(id, startMs, stepMs, cell) {
+  const occupied = cell.occupancy === null ? "occupancy not known"
+    : `occupied ${percent(cell.occupancy)} of the known time`;
+  const own = cell.own_s > 0 ? `, own ${duration(cell.own_s)}` : "";
+  return `${id}, ${stretch(startMs, stepMs)}: ${occupied}, `
+    + `unknown ${percent(cell.unknown_share)}${own}.`;
 }
 
 /** Where everything goes for a width [px]; null while the figure has no width. */
-function lay(channels, { fromMs, endMs, toMs }, width) {
+function lay(channels, { fromMs, endMs, stepMs, beginMs, toMs }, width) {
   if (width < 100) return null;
   const narrow = width < 640;
   const rowHeight = narrow ? 8 : 9;
@@ -135,9 +154,9 @@ function lay(channels, { fromMs, endMs, toMs }, width) {
   const y = (row) => top + 3 + row * rowHeight + Math.floor(row / TEN) * groupGap;
   const bottom = y(channels.length - 1) + rowHeight + 3;
   return {
-    channels, narrow, width, left, top, bottom, plotWidth, rowHeight, y, fromMs, endMs, toMs,
-    height: bottom + 20,
-    columns: Math.round((endMs - fromMs) / QUARTER_MS),
+    channels, narrow, width, left, top, bottom, plotWidth, rowHeight, y, fromMs, endMs, stepMs,
+    beginMs, toMs, height: bottom + 20,
+    columns: Math.round((endMs - fromMs) / stepMs),
     x: (ms) => left + plotWidth * (ms - fromMs) / (endMs - fromMs),
     rowAt: (at) => channels.findIndex((_, row) => at >= y(row) && at < y(row) + rowHeight),
   };
@@ -153,21 +172,19 @@ function strokes(record, layout) {
       if (open) paths[open.kind].push(box(open.from, top, open.to, top + layout.rowHeight));
     };
     for (let column = 0; column < layout.columns; column += 1) {
-      const startMs = layout.fromMs + column * QUARTER_MS;
-      const quarter = record.quarter(channel.id, startMs);
-      const from = layout.x(startMs);
-      const to = layout.x(Math.min(startMs + QUARTER_MS, layout.toMs));
-      const kind = quarter === null ? null : texture(quarter);
+      const cell = record.cell(channel.id, layout.fromMs + column * layout.stepMs);
+      const kind = cell === null ? null : texture(cell);
+      const [from, to] = cell === null ? [0, 0] : [layout.x(cell.fromMs), layout.x(cell.toMs)];
       if (open && open.kind === kind) {
         open.to = to;
       } else {
         close();
         open = kind === null ? null : { kind, from, to };
       }
-      const inked = quarter !== null && kind !== "chart-unknown" && kind !== "chart-own";
-      if (inked && quarter.occupancy > 0) {
+      const inked = cell !== null && kind !== "chart-unknown" && kind !== "chart-own";
+      if (inked && cell.occupancy > 0) {
         const middle = top + layout.rowHeight / 2;
-        const half = Math.max(0.8, quarter.occupancy * (layout.rowHeight - 1)) / 2;
+        const half = Math.max(0.8, cell.occupancy * (layout.rowHeight - 1)) / 2;
         paths["chart-ink"].push(box(from, middle - half, to, middle + half));
       }
     }
@@ -176,10 +193,11 @@ function strokes(record, layout) {
   return Object.fromEntries(Object.entries(paths).map(([id, parts]) => [id, parts.join("")]));
 }
 
-function texture(quarter) {
-  if (quarter.unknown_share > 0.5 || quarter.elapsed_s <= 0) return "chart-unknown";
-  if (quarter.own_share > 0.5) return "chart-own";
-  return quarter.unknown_share > SOME_UNKNOWN ? "chart-partly" : null;
+function texture(cell) {
+  if (cell.unknown_share > 0.5 || cell.elapsed_s <= 0) return "chart-unknown";
+  if (cell.own_share > 0.5) return "chart-own";
+  const marked = cell.unknown_share > SOME_UNKNOWN && cell.unknown_s > SOME_UNKNOWN_S;
+  return marked ? "chart-partly" : null;
 }
 
 function box(left, top, right, bottom) {
@@ -187,11 +205,10 @@ function box(left, top, right, bottom) {
   return `M${l} ${t}H${r}V${b}H${l}Z`;
 }
 
-/** The hours at which the time axis is labelled. */
+/** The moments at which the time axis is labelled. */
 function ticks({ fromMs, endMs, narrow }) {
-  const hours = (endMs - fromMs) / HOUR_MS;
-  const stepHours = hours <= 3 ? 0.5 : hours <= 6 ? 1 : hours <= 12 ? 2 : 3;
-  const step = stepHours * HOUR_MS * (narrow ? 2 : 1);
+  const [, every] = TICKS.find(([lengthMs]) => endMs - fromMs <= lengthMs);
+  const step = every * (narrow ? 2 : 1);
   const marks = [];
   for (let ms = Math.ceil(fromMs / step) * step; ms < endMs; ms += step) marks.push(ms);
   return marks;
@@ -221,7 +238,14 @@ function labels(layout) {
     const at = x < layout.left + 16 ? layout.left : x;
     return [label(at, layout.top - 7, text, kind), label(at, layout.bottom + 14, text, kind)];
   });
-  return [...names, ...times];
+  return [...names, ...times, ...aheadLabels(layout)];
+}
+
+/** What stands on the part of a young record's sheet that is not written yet. */
+function aheadLabels({ x, toMs, endMs, stepMs, top }) {
+  const room = x(endMs) - x(toMs);
+  if (endMs - toMs < stepMs || room < 80) return [];
+  return [label(x(toMs) + 8, top + 15, "yet to come", "chart-label quiet")];
 }
 
 function label(x, y, text, className) {

@@ -10,7 +10,7 @@ import { DayRecord } from "./record.js";
 import { Sheet, updateCounts } from "./sheet.js";
 import {
   captureWords, counted, detectionWords, healthSentence, historyWords, instant,
-  localTime, nodeWords, stateOf, utcDay, utcTime, wait,
+  isNumber, localTime, nodeWords, stateOf, utcDay, utcTime, wait,
 } from "./text.js";
 
 const SECOND_MS = 1000;
@@ -18,6 +18,8 @@ const STALE_MS = 3 * SECOND_MS;
 // Health is asked every two seconds, so one answer may fail before the page calls it not known.
 const HEALTH_STALE_MS = 5 * SECOND_MS;
 const TICK_MS = 250;
+// A commit holds what had reached the writer by then: the last dwells were still on their way.
+const LATE_DWELLS_MS = SECOND_MS;
 
 const record = new DayRecord();
 const sheet = new Sheet(choose);
@@ -29,8 +31,7 @@ const nodeFeed = new Feed(() => "v1/node", 60 * SECOND_MS, Infinity, takeNode);
 const channelFeed = new Feed(() => "v1/channels", SECOND_MS, STALE_MS, takeChannels);
 const offerFeed = new Feed(() => "v1/availability", SECOND_MS, STALE_MS, showNow);
 const healthFeed = new Feed(() => "v1/health", 2 * SECOND_MS, HEALTH_STALE_MS, showHealth);
-const recordFeed = new Feed(() => record.path(nowMs() ?? Date.now()), 30 * SECOND_MS, Infinity,
-  takeRecord);
+const recordFeed = new Feed(recordPath, 30 * SECOND_MS, Infinity, takeRecord);
 
 /** The node's time [ms], carried on from its newest answer; null before the first. */
 function nowMs() {
@@ -103,8 +104,23 @@ function layOut() {
   if (lately.channels.length === 0) showRecord();
 }
 
+/** The next question on the record; it reaches as far as the node has written. */
+function recordPath() {
+  const now = nowMs() ?? Date.now();
+  const { state, last_commit_age_s: age_s } = healthFeed.answer?.history ?? {};
+  const startedMs = instant(nodeFeed.answer?.started);
+  let committedMs = now;
+  // A node that no longer writes leaves a hole, and the hole is to be seen.
+  if (state === "writing") {
+    committedMs = isNumber(age_s)
+      ? now - healthFeed.ageMs() - age_s * SECOND_MS - LATE_DWELLS_MS : startedMs ?? now;
+  }
+  return record.path(committedMs, startedMs);
+}
+
 function takeRecord(answer) {
   record.take(answer);
+  recordFeed.periodMs = !record.complete ? 0 : record.sheet.young ? 10 * SECOND_MS : 30 * SECOND_MS;
   showRecord();
 }
 
@@ -118,6 +134,11 @@ function showNow() {
   const offered = new Set(view.offers.map((offer) => offer.channel));
   sheet.update(view.channels, offered, view.current);
   updateCounts(view.channels, offered, view.current);
+  // Which answers are shown, for whoever compares the page with the node.
+  setAttribute(byId("bands"), "data-answered",
+    view.current ? channelFeed.answer.now : null);
+  setAttribute(byId("offers"), "data-answered",
+    view.offersCurrent ? offerFeed.answer.now : null);
   updateOffers(view);
   updateRefusals(view);
   updateDetail(view, chosen);
@@ -172,7 +193,8 @@ function tick() {
   const ms = nowMs();
   if (ms !== null) {
     setText(byId("utc"), utcTime(ms));
-    setText(byId("local"), `${utcDay(ms)}; ${localTime(ms)} local`);
+    const local = localTime(ms);
+    setText(byId("local"), utcDay(ms) + (local === null ? "" : `; ${local} local`));
   }
   const current = channelFeed.current();
   const late = channelFeed.ageMs() > STALE_MS;

@@ -1,12 +1,67 @@
-// The record of the last day as the page holds it: four sums of time for each channel and quarter
-// hour. A quarter hour without a record is unknown, never blank and never idle.
+// The record of the last day as the page holds it: four sums of time for each channel and stretch.
+// Once a day is full it is told by quarter hours. A younger record is laid out from where it
+// begins, at first by single minutes, so that there is something to see while it grows.
+// A stretch without a record is unknown, never blank and never idle.
 
 import { instant } from "./text.js";
 
-export const QUARTER_MS = 15 * 60 * 1000;
-export const DAY_MS = 24 * 60 * 60 * 1000;
+const MINUTE_MS = 60 * 1000;
+const QUARTER_MS = 15 * MINUTE_MS;
+const DAY_MS = 24 * 60 * MINUTE_MS;
 const SUMS = ["occupied_s", "idle_s", "unknown_s", "own_s", "observed_s"];
-const SPANS_MS = [3, 6, 12, 24].map((hours) => hours * 60 * 60 * 1000);
+const NOTHING = [0, 0, 0, 0, 0];
+// What a young record is laid out on: whole length and step. Each has a dozen columns or more.
+const YOUNG_SHEETS = [[15, 1], [60, 5], [180, 15], [360, 15], [720, 15]]
+  .map(([lengthMinutes, stepMinutes]) => [lengthMinutes * MINUTE_MS, stepMinutes * MINUTE_MS]);
+
+/** The sums of time of every channel, in columns of one step. */
+class Columns {
+  constructor(stepMs) {
+    this.stepMs = stepMs;
+    this.channels = new Map();
+    this.newestMs = null;
+    this.toMs = null;
+  }
+
+  /** Takes an answer in; what it repeats is replaced. */
+  take(answer) {
+    const starts = (answer.start ?? []).map(instant);
+    const known = starts.filter((startMs) => startMs !== null);
+    if (known.length === 0) return;
+    for (const channel of answer.channels ?? []) {
+      if (!this.channels.has(channel.id)) this.channels.set(channel.id, new Map());
+      const kept = this.channels.get(channel.id);
+      starts.forEach((startMs, index) => {
+        if (startMs === null) return;
+        kept.set(floor(startMs, this.stepMs), SUMS.map((name) => channel[name]?.[index] ?? 0));
+      });
+    }
+    this.newestMs = Math.max(this.newestMs ?? -Infinity, floor(Math.max(...known), this.stepMs));
+    this.toMs = Math.max(this.toMs ?? -Infinity, instant(answer.to) ?? this.newestMs);
+  }
+
+  drop(beforeMs) {
+    for (const kept of this.channels.values()) {
+      for (const startMs of kept.keys()) {
+        if (startMs < beforeMs) kept.delete(startMs);
+      }
+    }
+  }
+
+  /** Where the first column with anything known starts, and how much of it is known [ms]. */
+  firstKnown() {
+    let first = null;
+    for (const kept of this.channels.values()) {
+      for (const [startMs, [occupied_s, idle_s, , own_s]] of kept) {
+        const knownMs = (occupied_s + idle_s + own_s) * 1000;
+        if (knownMs === 0 || startMs > (first?.startMs ?? Infinity)) continue;
+        const before = first?.startMs === startMs ? first.knownMs : 0;
+        first = { startMs, knownMs: Math.max(before, knownMs) };
+      }
+    }
+    return first;
+  }
+}
 
 export class DayRecord {
   constructor() {
@@ -15,88 +70,129 @@ export class DayRecord {
 
   /** Forgets everything, so that the next question asks for the whole day. */
   clear() {
-    this.quarters = new Map();
-    this.newestMs = null;
-    this.toMs = null;
+    this.quarters = new Columns(QUARTER_MS);
+    this.sheet = null;
+    this.asked = null;
+    this.nextMs = null;
+    /** Whether the newest answer reached the end of the record. */
+    this.complete = false;
   }
 
   /**
-   * The question to ask at `nowMs`: the whole day first, then only the newest two quarter hours, so
-   * that a page left open over a metered link costs little.
+   * The question to ask; null when there is nothing to ask yet. `committedMs` is how far the node
+   * has written its record, `startedMs` when the node started (null when that is not known).
+   * First comes the whole day, then only what may have changed, so that a page that is left open
+   * over a metered link costs little.
    */
-  path(nowMs) {
-    const dayMs = endOfQuarter(nowMs) - DAY_MS;
-    const fromMs = this.newestMs === null ? dayMs : Math.max(dayMs, this.newestMs - QUARTER_MS);
-    return `v1/occupancy?resolution=15m&from=${new Date(fromMs).toISOString()}`;
+  path(committedMs, startedMs) {
+    const dayMs = floor(committedMs, QUARTER_MS) + QUARTER_MS - DAY_MS;
+    this.asked = { columns: this.quarters, newestMs: null, committedMs, startedMs };
+    if (this.quarters.newestMs === null) return path(dayMs, committedMs);
+    this.layOut(committedMs, startedMs);
+    const { columns, fromMs, beginMs, stepMs } = this.sheet;
+    if (columns === this.quarters) {
+      return path(Math.max(dayMs, columns.newestMs - QUARTER_MS), committedMs);
+    }
+    // The node answers by quarter hours and cuts them to the range: one question, one fine column.
+    const newestMs = floor(committedMs - 1, stepMs);
+    this.asked = { ...this.asked, columns, newestMs };
+    this.nextMs = Math.max(fromMs, Math.min(this.nextMs ?? fromMs, newestMs));
+    return path(Math.max(beginMs, this.nextMs), Math.min(committedMs, this.nextMs + stepMs));
   }
 
-  /** Takes an answer in; quarter hours that it repeats are replaced. */
+  /** Chooses what the record is laid out on: the first sheet that still has room for it. */
+  layOut(committedMs, startedMs) {
+    const beginMs = this.begin(startedMs ?? committedMs);
+    const young = YOUNG_SHEETS.find(([lengthMs, stepMs]) =>
+      committedMs < floor(beginMs, stepMs) + lengthMs);
+    const [lengthMs, stepMs] = young ?? [DAY_MS, QUARTER_MS];
+    const fromMs = young ? floor(beginMs, stepMs)
+      : floor(committedMs, QUARTER_MS) + QUARTER_MS - DAY_MS;
+    const before = this.sheet;
+    if (before?.fromMs === fromMs && before.endMs === fromMs + lengthMs) return;
+    const fine = stepMs < QUARTER_MS;
+    this.sheet = {
+      fromMs, endMs: fromMs + lengthMs, stepMs, young: young !== undefined,
+      beginMs: young ? beginMs : fromMs,
+      columns: fine ? new Columns(stepMs) : this.quarters,
+    };
+    this.nextMs = null;
+  }
+
+  /** Where the record begins: with the node, unless something older is on record. */
+  begin(startedMs) {
+    const first = this.quarters.firstKnown();
+    if (first === null) return startedMs;
+    const { startMs, knownMs } = first;
+    const untilMs = Math.min(startMs + QUARTER_MS, this.quarters.toMs);
+    const withNode = startedMs >= startMs && startedMs < untilMs
+      && knownMs <= untilMs - startedMs;
+    return withNode ? startedMs : startMs;
+  }
+
+  /** Takes in the answer to the newest question; one from before a `clear` is left out. */
   take(answer) {
-    const starts = (answer.start ?? []).map(instant);
-    for (const channel of answer.channels ?? []) {
-      if (!this.quarters.has(channel.id)) this.quarters.set(channel.id, new Map());
-      const kept = this.quarters.get(channel.id);
-      starts.forEach((startMs, index) => {
-        if (startMs === null) return;
-        kept.set(startMs, SUMS.map((name) => channel[name]?.[index] ?? 0));
-      });
+    if (this.asked === null) return;
+    const { columns, newestMs, committedMs, startedMs } = this.asked;
+    columns.take(answer);
+    if (columns === this.quarters) {
+      columns.drop(columns.newestMs + QUARTER_MS - DAY_MS);
+      // The first answer says how old the record is. A young one is then asked for more finely.
+      this.layOut(committedMs, startedMs);
+      this.complete = this.sheet.columns === columns;
+      return;
     }
-    const known = starts.filter((startMs) => startMs !== null);
-    if (known.length === 0) return;
-    this.newestMs = Math.max(...known);
-    this.toMs = instant(answer.to) ?? this.newestMs + QUARTER_MS;
-    this.drop(this.newestMs + QUARTER_MS - DAY_MS);
+    this.complete = this.nextMs >= newestMs;
+    // The last whole column is asked for once more: its end may have been written late.
+    this.nextMs += this.complete ? -columns.stepMs : columns.stepMs;
   }
 
-  drop(beforeMs) {
-    for (const kept of this.quarters.values()) {
-      for (const startMs of kept.keys()) {
-        if (startMs < beforeMs) kept.delete(startMs);
-      }
-    }
+  /** What there is to show; null before the first answer. */
+  shown() {
+    if (this.sheet === null || this.sheet.columns.newestMs === null) return null;
+    const { fromMs, endMs, stepMs, beginMs, young, columns } = this.sheet;
+    return { fromMs, endMs, stepMs, beginMs, young, toMs: columns.toMs };
   }
 
-  /** The sums of one quarter hour, with its elapsed time [s]; null when it lies ahead. */
-  quarter(id, startMs) {
-    const elapsed = Math.min(QUARTER_MS, this.toMs - startMs) / 1000;
-    if (elapsed <= 0) return null;
-    const sums = this.quarters.get(id)?.get(startMs);
-    return named(sums ?? [0, 0, elapsed, 0, 0]);
+  /** The sums of one column, and the time from and to which they count; null outside the record. */
+  cell(id, startMs) {
+    const { columns, stepMs, beginMs } = this.sheet;
+    const fromMs = Math.max(startMs, beginMs);
+    const toMs = Math.min(startMs + stepMs, columns.toMs);
+    if (toMs <= fromMs) return null;
+    const elapsed_s = (toMs - fromMs) / 1000;
+    const sums = [...columns.channels.get(id)?.get(startMs) ?? [0, 0, elapsed_s, 0, 0]];
+    // A whole quarter hour holds, as unknown, the time in it before the record began.
+    const before_s = sums[0] + sums[1] + sums[2] + sums[3] - elapsed_s;
+    if (startMs < beginMs && before_s > 0) sums[2] = Math.max(0, sums[2] - before_s);
+    return { fromMs, toMs, ...named(sums) };
   }
 
-  /** The stretch to show: the shortest of a few round spans that holds the whole record. */
-  stretch() {
-    const endMs = this.newestMs + QUARTER_MS;
-    let firstMs = endMs;
-    for (const kept of this.quarters.values()) {
-      for (const [startMs, sums] of kept) {
-        if (startMs < firstMs && (sums[0] > 0 || sums[1] > 0 || sums[3] > 0)) firstMs = startMs;
-      }
+  /** The sums of a channel over all that is shown. */
+  total(id) {
+    const { fromMs, stepMs, columns } = this.sheet;
+    const cells = [];
+    for (let startMs = fromMs; startMs <= columns.newestMs; startMs += stepMs) {
+      cells.push(this.cell(id, startMs));
     }
-    const span = SPANS_MS.find((candidate) => endMs - candidate <= firstMs) ?? DAY_MS;
-    return { fromMs: endMs - span, endMs, toMs: this.toMs, firstMs };
-  }
-
-  /** The sums of a channel from `fromMs` on. */
-  total(id, fromMs) {
-    const sums = [0, 0, 0, 0, 0];
-    for (let startMs = fromMs; startMs <= this.newestMs; startMs += QUARTER_MS) {
-      const quarter = this.quarter(id, startMs);
-      if (quarter) SUMS.forEach((name, index) => { sums[index] += quarter[name]; });
-    }
-    return named(sums);
+    return addUp(cells.filter((cell) => cell !== null));
   }
 }
 
-/** Adds up the totals of several channels. */
+/** Adds up cells, or the totals of several channels. */
 export function addUp(totals) {
   return named(totals.reduce((sums, total) => SUMS.map((name, index) => sums[index] + total[name]),
-    [0, 0, 0, 0, 0]));
+    NOTHING));
 }
 
-/** The end of the quarter hour in which a moment lies. */
-function endOfQuarter(ms) {
-  return (Math.floor(ms / QUARTER_MS) + 1) * QUARTER_MS;
+function path(fromMs, toMs) {
+  if (fromMs >= toMs) return null;
+  const range = [fromMs, toMs].map((ms) => new Date(ms).toISOString());
+  return `v1/occupancy?resolution=15m&from=${range[0]}&to=${range[1]}`;
+}
+
+function floor(ms, stepMs) {
+  return Math.floor(ms / stepMs) * stepMs;
 }
 
 function named(sums) {

@@ -4,7 +4,7 @@
 const MISSING = "not measured";
 // Between a number and its unit, so that a line never breaks there.
 const NB = "\u00a0";
-const QUARTER_MS = 15 * 60 * 1000;
+const MINUTE_MS = 60 * 1000;
 
 /** Whether a value is a number that can be shown. */
 export function isNumber(value) {
@@ -122,9 +122,10 @@ const localFormat = new Intl.DateTimeFormat("en-GB", {
   hour: "2-digit", minute: "2-digit", second: "2-digit", timeZoneName: "short",
 });
 
-/** The same instant in the reader's own zone, such as "15:03:09 BST". */
+/** The same instant in the reader's own zone, such as "15:03:09 BST"; null where that is UTC. */
 export function localTime(ms) {
-  return localFormat.format(ms);
+  const local = localFormat.format(ms);
+  return local.endsWith(" UTC") ? null : local;
 }
 
 /** A stamp as "14:03:09 UTC", with its day when that is not the day of `nowMs`. */
@@ -133,9 +134,16 @@ export function when(ms, nowMs) {
   return `${utcTime(ms)} UTC${sameDay ? "" : ` on ${utcDay(ms)}`}`;
 }
 
-/** A quarter hour as "13:15–13:30 UTC". */
-export function quarterHour(startMs) {
-  return `${utcMinute(startMs)}–${utcMinute(startMs + QUARTER_MS)} UTC`;
+/** A stretch of time as "13:15–13:30 UTC". */
+export function stretch(startMs, lengthMs) {
+  return `${utcMinute(startMs)}–${utcMinute(startMs + lengthMs)} UTC`;
+}
+
+const STRETCH_NAMES = new Map([[1, "minute"], [5, "five minutes"], [15, "quarter hour"]]);
+
+/** What a stretch of that length is called: "minute", "quarter hour". */
+export function stretchName(lengthMs) {
+  return STRETCH_NAMES.get(lengthMs / MINUTE_MS) ?? duration(lengthMs / 1000);
 }
 
 // For each reason code: a short name, and a sentence that may use the band's policy.
@@ -213,12 +221,12 @@ export function verdictSentence(channel, band, reference, nowMs) {
       ? `A burst was found; its mean over the dwell is ${decibels(margin)} under the threshold.`
       : `${decibels(margin)} over the threshold.`);
   }
+  if (state === "idle" && isNumber(margin)) words.push(`${decibels(margin)} under the threshold.`);
   if (isNumber(channel.sensitivity_db) && (state === "idle" || state === "unknown")) {
-    const wanted = band ? `, protection level ${level(band.protection_level_db, reference)}` : "";
-    const heard = `ould have heard ${level(channel.sensitivity_db, reference)}${wanted}.`;
-    words.push(state === "idle" && isNumber(margin)
-      ? `${decibels(margin)} under the threshold; w${heard}`
-      : `W${heard}`);
+    const wanted = band
+      ? `; the protection level is ${level(band.protection_level_db, reference)}` : "";
+    words.push(`A signal of ${level(channel.sensitivity_db, reference)} would have been `
+      + `heard${wanted}.`);
   }
   return words.join(" ");
 }

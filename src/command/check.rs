@@ -1,18 +1,14 @@
 //! `check`: is the configuration right, and what does it amount to?
 
-use std::fmt::Write as _;
-use std::io::Write as _;
 use std::path::PathBuf;
 
 use clap::Args;
 
-use super::Failure;
 use super::derived::{BandNumbers, Derived, TRANSMISSIONS_PER_HOUR};
-use crate::config::Configuration;
-use crate::config::quantity::{
-    format_duration, format_frequency, format_sample_rate, format_share,
-};
-use crate::daemon::open_source;
+use super::{Failure, print};
+use crate::config::quantity::{format_duration, format_frequency, format_sample_rate};
+use crate::config::{Configuration, Source};
+use crate::daemon::{DATABASE_NAME, open_source};
 use crate::detection::time::Utc;
 
 #[derive(Args)]
@@ -27,7 +23,7 @@ pub(super) struct CheckArguments {
 
 pub(super) fn check(arguments: &CheckArguments) -> Result<(), Failure> {
     let configuration = Configuration::load(&arguments.config)?;
-    // What the source really delivers decides, where there is one; a replay's configuration has none.
+    // What the source really delivers decides; the configuration of a replay has none.
     let (centre_hz, sample_rate_hz) = match configuration.source {
         Some(_) => {
             let source = open_source(&configuration, Utc(0), 0)?;
@@ -44,18 +40,28 @@ pub(super) fn check(arguments: &CheckArguments) -> Result<(), Failure> {
         text.push('\n');
         text
     } else {
-        in_words(&derived, &warnings)
+        in_words(&configuration, &derived, &warnings)
     };
-    // A reader that has seen enough is no fault.
-    drop(std::io::stdout().write_all(text.as_bytes()));
-    Ok(())
+    print(&text)
 }
 
-fn in_words(derived: &Derived, warnings: &[String]) -> String {
+fn in_words(configuration: &Configuration, derived: &Derived, warnings: &[String]) -> String {
     let mut text = String::new();
     let mut line = |name: &str, value: String| {
-        writeln!(text, "{name:<26}{value}").expect("a string takes all");
+        text.push_str(format!("{name:<26}{value}").trim_end());
+        text.push('\n');
     };
+    let node = &configuration.node;
+    line("node", format!("{} at {}", node.name, node.site));
+    let source = match &configuration.source {
+        Some(Source::Scene { name }) => format!("invented scene {name}"),
+        Some(Source::Recording { path }) => format!("recording {}", path.display()),
+        None => "none: for replays only".to_owned(),
+    };
+    line("source", source);
+    line("history", configuration.data_directory.join(DATABASE_NAME).display().to_string());
+    line("answers", format!("http://{}/", configuration.listen));
+    line("", String::new());
     line(
         "receiver",
         format!(
@@ -75,16 +81,15 @@ fn in_words(derived: &Derived, warnings: &[String]) -> String {
     for band in &derived.bands {
         band_in_words(band, derived.level_ref, &mut line);
     }
-    let mega = |bytes: f64| format!("{:.1} MB", bytes / 1e6);
     line("", String::new());
-    line("buffers, all full", mega(derived.buffers_bytes));
+    line("buffers, all full", size(derived.buffers_bytes));
     line(
-        "database growth per day",
+        "database growth a day",
         format!(
-            "{} of rollups, {} of runs at {TRANSMISSIONS_PER_HOUR} transmissions an hour on each \
-             channel",
-            mega(derived.rollups_bytes_per_day),
-            mega(derived.runs_bytes_per_day)
+            "{} of quarter hours, and {} of runs at {TRANSMISSIONS_PER_HOUR} transmissions an hour \
+             on each channel",
+            size(derived.rollups_bytes_per_day),
+            size(derived.runs_bytes_per_day)
         ),
     );
     for warning in warnings {
@@ -96,8 +101,10 @@ fn in_words(derived: &Derived, warnings: &[String]) -> String {
 
 fn band_in_words(band: &BandNumbers, level_ref: &str, line: &mut impl FnMut(&str, String)) {
     line("", String::new());
-    line("band", format!("{}, {} channels", band.id, band.channels));
-    line("bins per channel", format!("{:.1}", band.bins_per_channel));
+    let channels = if band.channels == 1 { "channel" } else { "channels" };
+    line("band", format!("{}, {} {channels}", band.id, band.channels));
+    let worst = &band.least_sensitive_channel;
+    line("least sensitive channel", format!("{worst}, {} bins", band.bins_per_channel));
     line(
         "dwell",
         format!(
@@ -108,44 +115,88 @@ fn band_in_words(band: &BandNumbers, level_ref: &str, line: &mut impl FnMut(&str
         ),
     );
     line(
-        "averages per dwell",
+        "averages",
         format!(
-            "{} transforms overlapping by {:.1} %, worth {:.0} independent looks a channel",
+            "{} transforms a dwell, overlapping by {:.0} %, worth {:.0} independent looks",
             band.transforms_per_dwell,
             100.0 * band.overlap,
             band.equivalent_looks
         ),
     );
-    line("reference cells", format!("{}", band.reference_cells));
+    line("reference cells", format!("{} for the noise floor", band.reference_cells));
+    levels_in_words(band, level_ref, line);
     line(
-        "threshold",
-        format!("{:.2} dB over the floor, for Pfa {:e}", band.threshold_over_floor_db, band.pfa),
+        "false detections an hour",
+        format!(
+            "{} on a channel, {} in the band",
+            two_digits(band.false_detections_per_channel_hour),
+            two_digits(band.false_detections_per_hour)
+        ),
     );
+    // Cut off, not rounded: 99.96 % is not all of the time.
+    let share = (band.idle_offer_share * 1e3).floor() / 10.0;
+    line("idle channel on offer", format!("{share:.1} % of the time"));
+}
+
+fn levels_in_words(band: &BandNumbers, level_ref: &str, line: &mut impl FnMut(&str, String)) {
+    let (Some(threshold_db), Some(sensitivity_db), Some(floor_max_db)) =
+        (band.threshold_over_floor_db, band.sensitivity_over_floor_db, band.floor_max_db)
+    else {
+        let text = format!(
+            "none in {}: other cells are too few to tell its noise floor, so it stays unknown",
+            band.least_sensitive_channel
+        );
+        line("threshold", text);
+        return;
+    };
+    line("threshold", format!("{threshold_db:.2} dB over the floor, for Pfa {:e}", band.pfa));
+    let side = if sensitivity_db < 0.0 { "below" } else { "over" };
     line(
         "sensitivity",
-        format!(
-            "{:.2} dB relative to the floor, for Pd {}",
-            band.sensitivity_over_floor_db, band.pd
-        ),
+        format!("{:.1} dB {side} the floor, for Pd {}", sensitivity_db.abs(), band.pd),
     );
     line(
         "protection level",
         format!(
-            "{} {level_ref}: heard while the floor in a channel is at most {:.1} {level_ref}",
-            band.protection_level_db, band.floor_max_db
+            "{} {level_ref}, detected while the noise in the channel is at most {floor_max_db:.1} \
+             {level_ref}",
+            band.protection_level_db
         ),
     );
-    line(
-        "false detections an hour",
-        format!(
-            "{:.2} a channel, {:.0} in the band",
-            band.false_detections_per_channel_hour, band.false_detections_per_hour
-        ),
-    );
-    line("idle channel on offer", format!("{} of the time", format_share(band.idle_offer_share)));
 }
 
 /// Microseconds suffice for people.
 fn rounded(seconds: f64) -> f64 {
     (seconds * 1e6).round() / 1e6
+}
+
+/// A size in decimal units: `31 kB`, `5.7 MB`.
+fn size(bytes: f64) -> String {
+    let units = [(1e9, "GB"), (1e6, "MB"), (1e3, "kB")];
+    let fitting = units.into_iter().find(|(unit, _)| bytes >= 0.9995 * unit);
+    let (unit, name) = fitting.unwrap_or((1.0, "B"));
+    format!("{} {name}", two_digits(bytes / unit))
+}
+
+/// A number to about two digits: `1.8`, `162`, `0.002`.
+fn two_digits(value: f64) -> String {
+    if value >= 9.95 || value <= 0.0 {
+        return format!("{value:.0}");
+    }
+    // What rounds up to the next power of ten counts as one.
+    let decimals = (1.0 - (1.005 * value).log10().floor()).clamp(1.0, 12.0) as usize;
+    format!("{value:.decimals$}")
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn numbers_for_people_have_about_two_digits() {
+        let texts = [0.0, 1.8e-9, 0.0018, 0.5, 1.8, 9.94, 9.96, 162.4].map(two_digits);
+        assert_eq!(texts, ["0", "0.0000000018", "0.0018", "0.50", "1.8", "9.9", "10", "162"]);
+        let texts = [0.0, 31_400.0, 999_800.0, 5.72e6, 1.2e10].map(size);
+        assert_eq!(texts, ["0 B", "31 kB", "1.0 MB", "5.7 MB", "12 GB"]);
+    }
 }

@@ -5,8 +5,8 @@ use std::path::{Path, PathBuf};
 
 use clap::Args;
 
-use super::Failure;
-use super::run::{serve, start_logging};
+use super::run::{Named, serve, start_logging};
+use super::{Failure, print};
 use crate::config::Configuration;
 
 /// The demo's configuration, as shipped.
@@ -34,18 +34,12 @@ pub(super) fn demo(arguments: &DemoArguments) -> Result<(), Failure> {
         let line = format!("--listen: {listen} is not a loopback address, such as 127.0.0.1:0");
         return Err(Failure::new(Failure::USAGE, line));
     }
-    let data = arguments.data.display().to_string();
-    let outcome = serve(&configuration, listen, arguments.seed, |address| {
-        println!(
-            "An invented scene, the Lower Saltmarsh drainage board: nothing here is on the air."
-        );
-        println!("Open http://{address}/ (history in {data}); Ctrl-C ends it.");
-    });
-    outcome.map_err(|failure| match failure.code {
-        Failure::ADDRESS => Failure {
-            line: format!("{}; give another with --listen, such as 127.0.0.1:0", failure.line),
-            ..failure
-        },
-        _ => failure,
+    let data = arguments.data.display();
+    let named = Named { listen: "--listen".to_owned(), data: "--data".to_owned() };
+    serve(&configuration, listen, arguments.seed, &named, |address| {
+        print(&format!(
+            "An invented scene, the Lower Saltmarsh drainage board: nothing here is on the air.\n\
+             Open http://{address}/ (history in {data}); Ctrl-C ends it.\n"
+        ))
     })
 }

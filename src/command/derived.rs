@@ -4,9 +4,11 @@ use serde::Serialize;
 
 use crate::config::idle_offer_share;
 use crate::daemon::{QUEUE_BLOCKS, block_samples};
+use crate::detection::decision::{Integrity, Scratch};
 use crate::detection::detector::Detector;
 use crate::detection::plan::{Band, Plan};
 use crate::detection::segment::SegmentDetector;
+use crate::detection::verdict::Levels;
 use crate::history::{Options, QUARTER_ROW_BYTES, RUN_ROW_BYTES, quarters_per_day};
 
 /// Transmissions an hour that a channel is taken to hold where growth is estimated: common practice
@@ -32,29 +34,31 @@ pub(super) struct Derived {
     pub(super) runs_bytes_per_day: f64,
 }
 
-/// What follows for one band.
+/// What follows for one band. What differs from channel to channel is that of its least sensitive
+/// one.
 #[derive(Serialize)]
 pub(super) struct BandNumbers {
     pub(super) id: String,
     pub(super) channels: usize,
-    pub(super) bins_per_channel: f64,
+    pub(super) least_sensitive_channel: String,
+    pub(super) bins_per_channel: usize,
     pub(super) dwell_s: f64,
     pub(super) slice_s: f64,
     pub(super) slices_per_dwell: usize,
     pub(super) overlap: f64,
     pub(super) transforms_per_dwell: usize,
-    /// Independent looks that they are worth in one channel.
+    /// Independent looks that they are worth in the channel.
     pub(super) equivalent_looks: f64,
     pub(super) reference_cells: usize,
     pub(super) pfa: f64,
     pub(super) pd: f64,
-    /// Over the floor, with all reference cells idle (dB).
-    pub(super) threshold_over_floor_db: f64,
-    /// Signal alone over the floor, with all reference cells idle (dB).
-    pub(super) sensitivity_over_floor_db: f64,
+    /// Over the floor (dB); `None` where even an idle block does not tell the floor.
+    pub(super) threshold_over_floor_db: Option<f64>,
+    /// Signal alone over the floor (dB).
+    pub(super) sensitivity_over_floor_db: Option<f64>,
     pub(super) protection_level_db: f64,
-    /// The highest floor in a channel at which the protection level is still heard (dB).
-    pub(super) floor_max_db: f64,
+    /// The highest floor in a channel at which the protection level is still detected (dB).
+    pub(super) floor_max_db: Option<f64>,
     pub(super) false_detections_per_channel_hour: f64,
     pub(super) false_detections_per_hour: f64,
     /// Share of time for which a truly idle channel is on offer.
@@ -67,13 +71,11 @@ impl Derived {
         let mut detector = Detector::new(plan);
         let mut bands = Vec::new();
         for (index, band) in plan.bands.iter().enumerate() {
-            let found = detector.segments().iter_mut().find_map(|segment| {
-                let holds = |channel: usize| plan.channels[channel].band_index == index;
-                let channels = &segment.layout().channels;
-                let place = channels.iter().position(|c| holds(c.channel_index))?;
-                Some(band_numbers(plan, index, band, segment, place))
-            });
-            bands.push(found.expect("every band has channels"));
+            let numbers = detector
+                .segments()
+                .iter_mut()
+                .find_map(|segment| band_numbers(plan, index, band, segment));
+            bands.push(numbers.expect("every band has channels"));
         }
         let false_per_hour: f64 = bands.iter().map(|band| band.false_detections_per_hour).sum();
         let channels = plan.channels.len() as f64;
@@ -95,27 +97,36 @@ impl Derived {
     }
 }
 
+/// The numbers of a band; `None` when the segment holds another's channels.
 fn band_numbers(
     plan: &Plan,
     band_index: usize,
     band: &Band,
     segment: &mut SegmentDetector,
-    place: usize,
-) -> BandNumbers {
+) -> Option<BandNumbers> {
+    let idle = idle_dwell(plan, segment);
+    let sensitivity_db = |place: usize| idle[place].map_or(f64::INFINITY, |l| l.sensitivity_db);
+    let in_band = |place: &usize| {
+        plan.channels[segment.layout().channels[*place].channel_index].band_index == band_index
+    };
+    let place = (0..idle.len())
+        .filter(in_band)
+        .max_by(|a, b| sensitivity_db(*a).total_cmp(&sensitivity_db(*b)))?;
     let timing = segment.timing();
+    let looks = segment.decision(timing.slices).looks(place);
+    let over_floor_db = |level: fn(Levels) -> f64| idle[place].map(|l| level(l) - l.floor_db);
+    let sensitivity_over_floor_db = over_floor_db(|levels| levels.sensitivity_db);
     let rate_hz = plan.receiver.sample_rate_hz;
-    let decision = segment.decision(timing.slices);
-    let looks = decision.looks(place);
-    let (threshold, snr) = decision.threshold(place, decision.reference_looks() - looks);
-    let decibels = |ratio: f64| 10.0 * ratio.log10();
     let dwell_s = timing.dwell_samples() as f64 / rate_hz;
     let channels = plan.channels.iter().filter(|c| c.band_index == band_index).count();
     let false_per_channel_hour = band.pfa * 3600.0 / dwell_s;
     let layout = segment.layout();
-    BandNumbers {
+    let channel = &layout.channels[place];
+    Some(BandNumbers {
         id: band.id.clone(),
         channels,
-        bins_per_channel: layout.channels[place].span.bins() as f64,
+        least_sensitive_channel: plan.channels[channel.channel_index].id.clone(),
+        bins_per_channel: channel.span.bins(),
         dwell_s,
         slice_s: timing.slice_samples() as f64 / rate_hz,
         slices_per_dwell: timing.slices,
@@ -125,14 +136,27 @@ fn band_numbers(
         reference_cells: layout.references.len(),
         pfa: band.pfa,
         pd: band.pd,
-        threshold_over_floor_db: decibels(threshold),
-        sensitivity_over_floor_db: decibels(snr),
+        threshold_over_floor_db: over_floor_db(|levels| levels.threshold_db),
+        sensitivity_over_floor_db,
         protection_level_db: band.protection_level_db,
-        floor_max_db: band.protection_level_db - decibels(snr),
+        floor_max_db: sensitivity_over_floor_db.map(|db| band.protection_level_db - db),
         false_detections_per_channel_hour: false_per_channel_hour,
         false_detections_per_hour: false_per_channel_hour * channels as f64,
         idle_offer_share: idle_offer_share(band),
-    }
+    })
+}
+
+/// The levels of each of the segment's channels in a dwell without any signal. Thresholds relative
+/// to the floor are then those of every idle dwell: the decision itself is asked.
+fn idle_dwell(plan: &Plan, segment: &mut SegmentDetector) -> Vec<Option<Levels>> {
+    let slices = segment.timing().slices;
+    let spectrum = vec![1.0; plan.spectrum.transform_length];
+    let layout = segment.layout().clone();
+    let mut verdicts = Vec::new();
+    let mut scratch = Scratch::default();
+    let decision = segment.decision(slices);
+    decision.decide(&layout, &spectrum, Integrity::default(), &mut scratch, &mut verdicts);
+    verdicts.into_iter().map(|verdict| verdict.levels).collect()
 }
 
 /// What the queues and sums hold when they are full.

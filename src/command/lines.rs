@@ -54,7 +54,7 @@ fn verdict_line<'a>(
     let levels = verdict.levels;
     VerdictLine {
         time: time.to_owned(),
-        duration_s: report.observed_ns as f64 * 1e-9,
+        duration_s: report.observed_ns as f64 / 1e9,
         channel: &channel.id,
         centre_hz: channel.centre_hz,
         bandwidth_hz: channel.bandwidth_hz,

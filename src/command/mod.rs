@@ -11,11 +11,12 @@ mod run;
 mod summary;
 
 use std::fmt;
-use std::io::Write;
+use std::io::{self, Write};
 use std::path::PathBuf;
 use std::process::ExitCode;
 
-use clap::{Args, Parser, Subcommand};
+use clap::error::ErrorKind;
+use clap::{Args, CommandFactory, Parser, Subcommand};
 
 use crate::capture::CaptureError;
 use crate::config::ConfigError;
@@ -23,8 +24,8 @@ use crate::config::quantity;
 use crate::daemon::StartError;
 use crate::detection::time::Utc;
 
-/// Watches a block of spectrum and tells which of its channels a secondary radio may use now, for how
-/// long that holds, and how they were occupied before.
+/// Watches a block of spectrum and tells which of its channels a secondary radio may use now, for
+/// how long that holds, and how they were occupied before.
 #[derive(Parser)]
 #[command(name = "fallowband", version, after_help = EXIT_CODES)]
 struct Arguments {
@@ -33,9 +34,9 @@ struct Arguments {
 }
 
 const EXIT_CODES: &str = "\
-Exit codes: 0 done, 64 wrong arguments, 65 a recording that cannot be used, 69 an address that is in
-use, 70 a fault of the program, 73 a file or database that cannot be written, 78 a configuration that
-is wrong. Every fault is one line on standard error.
+Exit codes: 0 done, 64 wrong arguments, 65 a recording that cannot be used, 69 an address that
+cannot be served on, 70 a fault of the program, 73 a file or database that cannot be written, 78 a
+configuration that is wrong. Every fault is one line on standard error.
 
 A measurement is no licence to transmit, and a receiver cannot hear a hidden node.";
 
@@ -98,10 +99,10 @@ impl From<StartError> for Failure {
     fn from(error: StartError) -> Failure {
         match error {
             StartError::Config(error) => error.into(),
-            StartError::Capture(error) => error.into(),
+            StartError::Recording(..) => Failure::new(Failure::RECORDING, error),
             StartError::NoSource(_) => Failure::new(Failure::CONFIG, error),
-            StartError::Listen(..) => Failure::new(Failure::ADDRESS, error),
-            StartError::History(_) | StartError::Directory(..) => {
+            StartError::Thread(..) => Failure::new(Failure::INTERNAL, error),
+            StartError::History(..) | StartError::Directory(..) => {
                 Failure::new(Failure::WRITE, error)
             }
         }
@@ -110,29 +111,71 @@ impl From<StartError> for Failure {
 
 /// Runs the program; the exit codes are those that `--help` lists.
 pub fn main() -> ExitCode {
+    // A panic has printed its own line by then; what is left is to say whose fault it was.
+    let outcome = std::panic::catch_unwind(dispatch)
+        .unwrap_or_else(|_| Err(Failure::new(Failure::INTERNAL, "a fault of the program itself")));
+    match outcome {
+        Ok(()) => ExitCode::SUCCESS,
+        Err(failure) => {
+            let line = failure.line.replace(char::is_control, " ");
+            // With standard error gone, the exit code still tells.
+            drop(writeln!(io::stderr(), "fallowband: {line}"));
+            ExitCode::from(failure.code)
+        }
+    }
+}
+
+fn dispatch() -> Result<(), Failure> {
     let arguments = match Arguments::try_parse() {
         Ok(arguments) => arguments,
-        Err(error) => {
-            // Asked-for help and version are no fault.
-            let code = if error.use_stderr() { Failure::USAGE } else { 0 };
-            drop(error.print());
-            return ExitCode::from(code);
+        Err(error) if error.use_stderr() => {
+            return Err(Failure::new(Failure::USAGE, usage_line(&error)));
         }
+        // Asked-for help and version are no fault.
+        Err(asked) => return print(&asked.render().to_string()),
     };
-    let outcome = match arguments.command {
+    match arguments.command {
         Command::Run(argument) => run::run(&argument.config),
         Command::Demo(arguments) => demo::demo(&arguments),
         Command::Replay(arguments) => replay::replay(&arguments),
         Command::Check(arguments) => check::check(&arguments),
-    };
-    match outcome {
-        Ok(()) => ExitCode::SUCCESS,
-        Err(failure) => {
-            // With standard error gone, the exit code still tells.
-            drop(writeln!(std::io::stderr(), "fallowband: {}", failure.line));
-            ExitCode::from(failure.code)
-        }
     }
+}
+
+/// What is wrong with the arguments, in one line.
+fn usage_line(error: &clap::Error) -> String {
+    if error.kind() == ErrorKind::DisplayHelpOnMissingArgumentOrSubcommand {
+        let command = Arguments::command();
+        let names: Vec<&str> = command.get_subcommands().map(clap::Command::get_name).collect();
+        return format!("no command given: {}; see --help", names.join(", "));
+    }
+    let text = error.render().to_string();
+    // What is wrong stands before the first empty line; usage and hints follow.
+    let wrong: Vec<&str> =
+        text.lines().take_while(|line| !line.is_empty()).map(str::trim).collect();
+    let wrong = wrong.join(" ");
+    let wrong = wrong.strip_prefix("error: ").unwrap_or(&wrong);
+    let tip = text.lines().find_map(|line| line.trim().strip_prefix("tip: "));
+    let tip = tip.map(|tip| format!("; {tip}")).unwrap_or_default();
+    format!("{wrong}{tip}; see --help")
+}
+
+/// Writes what was asked for to standard output. A reader that has seen enough is no fault.
+fn print(text: &str) -> Result<(), Failure> {
+    let mut out = io::stdout();
+    match out.write_all(text.as_bytes()).and_then(|()| out.flush()) {
+        Err(error) if error.kind() != io::ErrorKind::BrokenPipe => {
+            let line = format!("standard output: cannot be written: {error}");
+            Err(Failure::new(Failure::WRITE, line))
+        }
+        _ => Ok(()),
+    }
+}
+
+/// Tells on standard error what is no fault, but worth knowing.
+fn note(text: impl fmt::Display) {
+    // Nobody reads it: then there is nobody to tell.
+    drop(writeln!(io::stderr(), "fallowband: note: {text}"));
 }
 
 /// A frequency argument, such as `435.1MHz`.

@@ -9,7 +9,7 @@ use clap::Args;
 use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
 
 use super::summary::Summary;
-use super::{Failure, frequency_hz, lines, moment};
+use super::{Failure, frequency_hz, lines, moment, note, print};
 use crate::capture::Source;
 use crate::capture::queue::{self, Blocks, CaptureState, Next, WhenFull};
 use crate::capture::recording::{Recording, Told};
@@ -58,7 +58,7 @@ pub(super) fn replay(arguments: &ReplayArguments) -> Result<(), Failure> {
     let configuration = Configuration::load(&arguments.config)?;
     let (recording, plan) = open(arguments, &configuration)?;
     for warning in configuration.warnings(&plan) {
-        eprintln!("fallowband: note: {warning}");
+        note(warning);
     }
     let mut output = open_output(arguments.verdicts.as_deref())?;
     let bar = progress_bar(recording.samples_total());
@@ -105,10 +105,9 @@ fn open(
     let recording = Recording::open(&arguments.recording, told)?;
     if !recording.dated() {
         let name = arguments.recording.display();
-        eprintln!(
-            "fallowband: note: {name}: states no date, so times count from 1970-01-01; tell the \
-             start with --start"
-        );
+        note(format_args!(
+            "{name}: states no date, so times count from 1970-01-01; tell the start with --start"
+        ));
     }
     let plan = configuration.plan(Some(recording.centre_hz()), Some(recording.sample_rate_hz()))?;
     Ok((recording, plan))
@@ -163,15 +162,14 @@ fn open_output(path: Option<&Path>) -> Result<Output, Failure> {
         });
     }
     let name = path.display().to_string();
-    let holds_something =
-        std::fs::metadata(path).is_ok_and(|meta| meta.is_file() && meta.len() > 0);
-    if holds_something {
-        let line = format!("{name}: holds something already; name a new file for --verdicts");
-        return Err(Failure::new(Failure::WRITE, line));
+    let refused = |what: String| Failure::new(Failure::WRITE, format!("{name}: {what}"));
+    let unwritable = |error| refused(format!("cannot be written: {error}"));
+    // Opened to append: whatever happens between here and the check, nothing is ever cut off.
+    let file = File::options().create(true).append(true).open(path).map_err(unwritable)?;
+    let metadata = file.metadata().map_err(unwritable)?;
+    if metadata.is_file() && metadata.len() > 0 {
+        return Err(refused("holds something already; name a new file for --verdicts".to_owned()));
     }
-    let file = File::create(path).map_err(|error| {
-        Failure::new(Failure::WRITE, format!("{name}: cannot be written: {error}"))
-    })?;
     Ok(Output {
         verdicts: Some(BufWriter::new(Box::new(file))),
         verdicts_name: name,
@@ -203,15 +201,10 @@ fn print_summary(
     } else {
         summary.table(plan)
     };
-    let printed = if to_stderr {
-        io::stderr().write_all(text.as_bytes())
-    } else {
-        io::stdout().write_all(text.as_bytes())
-    };
-    match printed {
-        Err(error) if error.kind() != io::ErrorKind::BrokenPipe => {
-            Err(Failure::new(Failure::WRITE, format!("standard output: {error}")))
-        }
-        _ => Ok(()),
+    if to_stderr {
+        // Standard error is gone: the lines are what was asked for, and they are out.
+        drop(io::stderr().write_all(text.as_bytes()));
+        return Ok(());
     }
+    print(&text)
 }

@@ -2,7 +2,6 @@
 
 use serde::Serialize;
 
-use crate::config::quantity::format_frequency;
 use crate::detection::plan::Plan;
 use crate::detection::verdict::{DwellReport, Reasons, State};
 
@@ -108,23 +107,24 @@ impl Summary {
     /// The table for people: one line a channel, columns lined up.
     pub(super) fn table(&self, plan: &Plan) -> String {
         let unit = plan.level_ref.as_str();
+        let decimals = centre_decimals(plan);
         let headings = [
             "channel".to_owned(),
-            "centre".to_owned(),
+            "centre MHz".to_owned(),
             "occupied s".to_owned(),
             "idle s".to_owned(),
             "unknown s".to_owned(),
             "occupancy".to_owned(),
-            format!("mean {unit}"),
+            format!("power {unit}"),
             format!("floor {unit}"),
-            format!("hears {unit}"),
+            format!("sensitivity {unit}"),
             "unknown because".to_owned(),
         ];
         let cells = |row: Row| {
             let level = |value: Option<f64>| value.map_or("-".to_owned(), |v| format!("{v:.1}"));
             [
                 row.channel,
-                format_frequency(row.centre_hz),
+                format!("{:.decimals$}", row.centre_hz / 1e6),
                 format!("{:.2}", row.occupied_s),
                 format!("{:.2}", row.idle_s),
                 format!("{:.2}", row.unknown_s),
@@ -138,6 +138,16 @@ impl Summary {
         let rows = std::iter::once(headings).chain(self.rows(plan).into_iter().map(cells));
         lined_up(&rows.collect::<Vec<_>>())
     }
+}
+
+/// Decimals that all centres need to be told in megahertz, to the hertz at most.
+fn centre_decimals(plan: &Plan) -> usize {
+    let needs_more = |decimals: usize| {
+        let steps = |hz: f64| hz / 10f64.powi(6 - decimals as i32);
+        let is_off = |hz: f64| (steps(hz) - steps(hz).round()).abs() > 1e-6;
+        plan.channels.iter().any(|channel| is_off(channel.centre_hz))
+    };
+    (3..6).find(|decimals| !needs_more(*decimals)).unwrap_or(6)
 }
 
 /// Rows as text; the first and last columns flush left, the others flush right.

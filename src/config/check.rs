@@ -10,7 +10,7 @@ use std::time::Duration;
 use super::channels;
 use super::error::{ConfigError, Place};
 use super::file;
-use super::quantity::{Quantity, format_duration, parse_level};
+use super::quantity::{Quantity, format_duration, format_share, parse_level};
 use super::{AskedBand, AskedReceiver, AskedSpectrum, Configuration, Node, SCENES, Source};
 use crate::detection::plan::{Band, FloorEstimator, FloorSettings, FloorTrend, LevelRef, Policy};
 use crate::detection::window::Window;
@@ -202,10 +202,18 @@ fn band(band: &file::Band, at: &Place) -> Result<Band, ConfigError> {
             format_duration(dwell_s)
         )));
     }
+    let pfa = share("pfa", &band.pfa, 1e-9..=0.5, DEFAULT_PFA)?;
+    let pd = share("pd", &band.pd, 0.5..=0.9999, DEFAULT_PD)?;
+    if pd <= pfa {
+        let (pd, pfa) = (format_share(pd), format_share(pfa));
+        let message =
+            format!("{pd} is not above pfa ({pfa}): noise alone would be detected so often");
+        return Err(at.at("pd").error(message));
+    }
     Ok(Band {
         id: at.at("id").name(&band.id, 40)?,
-        pfa: share("pfa", &band.pfa, 1e-9..=0.5, DEFAULT_PFA)?,
-        pd: share("pd", &band.pd, 0.5..=0.9999, DEFAULT_PD)?,
+        pfa,
+        pd,
         protection_level_db: protection_level_db(band, &at.at("protection_level"))?,
         dwell_s,
         slice_s: duration("slice", &band.slice, 100e-6..=dwell_s, slice_default_s)?,

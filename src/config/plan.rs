@@ -48,6 +48,7 @@ pub(super) fn plan(
         transform_length: transform_length(asked, &receiver, &channels)?,
     };
     for channel in &channels {
+        channel_has_its_bins(&channel.channel, &receiver, &spectrum, &at(&channel.key))?;
         channel_keeps_a_bin(&channel.channel, &receiver, &spectrum, &at(&channel.key))?;
     }
     for (index, band) in asked.bands.iter().enumerate() {
@@ -244,6 +245,33 @@ fn transform_length(
             Ok(wanted)
         }
     }
+}
+
+/// All bins that a channel reaches into must exist. Bins are centred on multiples of their width:
+/// the highest ends half a bin below half the sample rate; half of the lowest lies beyond it.
+fn channel_has_its_bins(
+    channel: &Channel,
+    receiver: &Receiver,
+    spectrum: &SpectrumSettings,
+    at: &Place,
+) -> Result<(), ConfigError> {
+    let (lower_hz, upper_hz) = channel.edges_hz();
+    let bin_hz = bin_width_hz(receiver, spectrum);
+    let length = spectrum.transform_length;
+    // Counted as the detector's layout counts them, so that rounding cannot part the two.
+    let bin = |hz: f64| (hz - receiver.centre_hz) / bin_hz + (length / 2) as f64 + 0.5;
+    if bin(lower_hz).floor() < 0.0 || bin(upper_hz).ceil() > length as f64 {
+        let low_hz = receiver.centre_hz - 0.5 * (receiver.sample_rate_hz + bin_hz);
+        let high_hz = receiver.centre_hz + 0.5 * (receiver.sample_rate_hz - bin_hz);
+        return Err(at.error(format_args!(
+            "channel {} ({}) reaches beyond the bins of the spectrum ({}), the last of which ends \
+             half a bin below half the sample rate",
+            channel.id,
+            range_text((lower_hz, upper_hz)),
+            range_text((low_hz, high_hz))
+        )));
+    }
+    Ok(())
 }
 
 /// What the DC guard leaves of a channel must hold at least one bin in one piece.

@@ -202,10 +202,11 @@ mod tests {
                 .users
                 .iter()
                 .filter(|user| user.kind == kind)
-                .map(|user| spec.snr_db(user).round())
+                .map(|user| spec.snr_db(user))
                 .collect();
-            assert!(snr_db.contains(&-8.0), "{}: {snr_db:?}", kind.as_str());
-            assert!(snr_db.contains(&60.0), "{}: {snr_db:?}", kind.as_str());
+            // The demo's dwells hear 10.5 dB below the noise.
+            assert!(snr_db.iter().any(|snr| *snr < -11.0), "{}: {snr_db:?}", kind.as_str());
+            assert!(snr_db.iter().any(|snr| *snr > 59.0), "{}: {snr_db:?}", kind.as_str());
         }
     }
 }

@@ -4,6 +4,7 @@ use std::collections::BTreeSet;
 use std::path::Path;
 
 use fallowband::config::{Configuration, SCENES, Source};
+use fallowband::scene::SceneSpec;
 
 use super::parse;
 
@@ -46,7 +47,10 @@ fn the_demo_is_the_lower_saltmarsh_scene_and_says_that_it_is_invented() {
     assert_eq!(offset(89), 44.5 * 25e3);
     let protected: Vec<&str> =
         plan.channels.iter().filter(|c| c.protected).map(|c| c.id.as_str()).collect();
-    assert_eq!(protected, ["S44", "S45", "S46"]);
+    let scene = SceneSpec::lower_saltmarsh();
+    let relay = scene.channels.iter().filter(|channel| channel.protected);
+    assert_eq!(protected, relay.map(|channel| channel.id.as_str()).collect::<Vec<_>>());
+    assert_eq!(protected.len(), 3);
 }
 
 #[test]
