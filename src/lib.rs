@@ -10,16 +10,18 @@
 //! ```
 //!
 //! - [`detection`] is the pure core: samples and time in, values out. No clock, no async, no I/O.
-//! - [`scene`] is pure too: it makes the samples of an invented site from a seed, and knows the truth.
-//! - [`capture`] turns a recording or a scene into stamped blocks; the only room that reads a clock.
+//! - [`scene`] is pure too: it makes the samples of an invented site from a seed, and knows the
+//!   truth.
+//! - [`capture`] turns a recording or a scene into stamped blocks; the only room that reads a
+//!   clock.
 //! - [`history`] keeps runs and rollups in SQLite.
 //! - [`answers`] serves them, and the newest verdicts from memory, over HTTP.
 //! - [`config`] turns a TOML file into checked values.
 //! - [`command`] is the command line; [`daemon`] is the one place that joins the rooms.
 //!
-//! The rule of stairs: `command` and `daemon` may use every room; a room uses `detection` and, down the
-//! arrows, at most the room before it (`answers` reads `history`, `capture` plays a `scene`).
-//! `tests/house.rs` enforces it.
+//! The rule of stairs: `command` and `daemon` may use every room; a room uses `detection` and,
+//! down the arrows, at most the room before it (`answers` reads `history`, `capture` plays a
+//! `scene`). `tests/house.rs` enforces it.
 
 pub mod answers;
 pub mod capture;

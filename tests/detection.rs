@@ -21,9 +21,9 @@ fn reports_of(plan: &Plan, samples: Vec<Complex32>) -> Vec<DwellReport> {
     reports
 }
 
-/// Asserts that `hits` of `trials` is what probability `wanted` gives, at a chance of 1e-4 of failing
-/// by bad luck. Decisions of one dwell share a floor; with 45 reference cells that widens the spread of
-/// the count by under 4 %, which is inside what 1e-4 allows.
+/// Asserts that `hits` of `trials` is what probability `wanted` gives, at a chance of 1e-4 of
+/// failing by bad luck. Decisions of one dwell share a floor; with 45 reference cells that widens
+/// the spread of the count by under 4 %, which is inside what 1e-4 allows.
 #[track_caller]
 fn assert_rate(hits: u64, trials: u64, wanted: f64, what: &str) {
     let (low, high) = interval::clopper_pearson(hits, trials, 0.9999);
@@ -138,9 +138,10 @@ fn a_signal_at_the_stated_sensitivity_is_found_with_the_required_probability() {
     }
     let rate = found as f64 / trials as f64;
     println!("sensitivity {:.2} dB over the floor: found {found} of {trials}", stated_db.unwrap());
-    // The window smears a signal that fills the channel to its very edges: 5 % of its power (0.2 dB)
-    // falls outside. With the third of the cells that such signals take away from the floor, the
-    // realised Pd may fall short by what 0.35 dB of level is worth, not more; 1,200 trials, 3 sigma.
+    // The window smears a signal that fills the channel to its very edges: 5 % of its power (0.2
+    // dB) falls outside. With the third of the cells that such signals take away from the floor,
+    // the realised Pd may fall short by what 0.35 dB of level is worth, not more; 1,200 trials, 3
+    // sigma.
     assert!(rate > 0.9 - 0.09 - 0.03 && rate < 0.93, "{rate}");
 }
 
@@ -246,7 +247,8 @@ fn a_gap_ends_the_dwell_and_no_report_reaches_across_it() {
     detector.finish(|report| reports.push(report));
     let timing = detector.segments()[0].timing();
     let slice_ns = timing.dwell_ns(1.2e6) / timing.slices as i64;
-    // One whole dwell, one whole slice of the dwell that the gap cut; after it again from its start.
+    // One whole dwell, one whole slice of the dwell that the gap cut; after it again from its
+    // start.
     let lengths: Vec<i64> =
         reports.iter().map(|r| (r.observed_ns as f64 / slice_ns as f64).round() as i64).collect();
     assert_eq!(lengths, [2, 1, 2, 1]);
@@ -316,8 +318,8 @@ fn a_flat_trend_reduces_to_cell_averaging_in_level() {
     let verdicts = &reports[0].verdicts;
     let powers: Vec<f64> =
         verdicts.iter().map(|v| 10f64.powf(v.levels.expect("measured").power_db / 10.0)).collect();
-    // The block holds cells at both edges too; the floor of a channel is the mean of all cells but its
-    // own, weighted by looks, so raising one channel's own power must not move its own floor.
+    // The block holds cells at both edges too; the floor of a channel is the mean of all cells but
+    // its own, weighted by looks, so raising one channel's own power must not move its own floor.
     let own_db = verdicts[20].levels.expect("measured").floor_db;
     let mean_of_others = (powers.iter().sum::<f64>() - powers[20]) / (powers.len() - 1) as f64;
     assert!((own_db - 10.0 * mean_of_others.log10()).abs() < 0.1, "{own_db}");

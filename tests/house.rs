@@ -32,10 +32,7 @@ const SPOKEN: [&str; 2] = ["println", "eprintln"];
 const LINES_MAX: usize = 450;
 
 /// Widest line (columns).
-///
-/// The page is 100 columns wide. rustfmt sees to the code; some older comments run over by a word,
-/// and none may run further than they do.
-const COLUMNS_MAX: usize = 104;
+const COLUMNS_MAX: usize = 100;
 
 fn project() -> &'static Path {
     Path::new(env!("CARGO_MANIFEST_DIR"))

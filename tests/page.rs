@@ -1,5 +1,6 @@
 //! The page in a real browser, against a real daemon on the demo's scene: what it shows must be
-//! what the node said. It never looks at the page's scripts, only at the document they leave behind.
+//! what the node said. It never looks at the page's scripts, only at the document they leave
+//! behind.
 //!
 //! The browser is Chromium. Where there is none the tests say so and prove nothing;
 //! `FALLOWBAND_REQUIRE_BROWSER=1` makes that a failure.

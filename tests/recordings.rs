@@ -1,9 +1,9 @@
 //! The detector on real off-air recordings, against their annotations.
 //!
 //! The recordings are kept outside the tree (`../shared/recordings`, or the folder that
-//! `FALLOWBAND_RECORDINGS` names); `tests/recordings/NAME.toml` lays channels over each. Where they are
-//! absent these tests say loudly that they were skipped; with `FALLOWBAND_REQUIRE_RECORDINGS=1` that
-//! is a failure.
+//! `FALLOWBAND_RECORDINGS` names); `tests/recordings/NAME.toml` lays channels over each. Where they
+//! are absent these tests say loudly that they were skipped; with `FALLOWBAND_REQUIRE_RECORDINGS=1`
+//! that is a failure.
 
 use std::path::{Path, PathBuf};
 
@@ -89,8 +89,8 @@ impl Run {
     }
 }
 
-/// Dwells of the UHF files, which have one channel: wholly on and found, wholly on, idle and called so,
-/// idle.
+/// Dwells of the UHF files, which have one channel: wholly on and found, wholly on, idle and called
+/// so, idle.
 #[derive(Debug, Default)]
 struct Score {
     found: u64,

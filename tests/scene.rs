@@ -158,8 +158,8 @@ fn ten_minutes_of_the_demo_agree_with_the_truth() {
         unknown += counts[2];
         all += total;
         match row {
-            // The dwell's sensitivity is 10.5 dB below the noise in a channel: whatever is on for the
-            // whole dwell at 0 dB or more must be found, every time.
+            // The dwell's sensitivity is 10.5 dB below the noise in a channel: whatever is on for
+            // the whole dwell at 0 dB or more must be found, every time.
             Row::On { snr_step, .. } if *snr_step >= 0 => {
                 detected_at_0_db.iter_mut().zip(counts).for_each(|(sum, count)| *sum += count);
             }

@@ -1,7 +1,7 @@
 //! From verdicts to an answer: which channels a radio may be offered now, and why not the others.
 //!
-//! A channel is offered when the plan allows it, its newest verdict is young enough and `idle`, it has
-//! been idle without a gap for the check time, and nothing was detected on it for the hold-off.
+//! A channel is offered when the plan allows it, its newest verdict is young enough and `idle`, it
+//! has been idle without a gap for the check time, and nothing was detected on it for the hold-off.
 
 use super::plan::{Band, Plan};
 use super::standing::{CONTIGUITY_NS, ChannelStanding, Standing};
@@ -95,8 +95,8 @@ fn judge(
     if protected {
         refusals.push(Refusal::Protected);
     }
-    // Half-open: evidence exactly as old as the limit is stale. Evidence from the future (a clock that
-    // ran backwards) proves nothing about freshness either, but for the rounding of stamps.
+    // Half-open: evidence exactly as old as the limit is stale. Evidence from the future (a clock
+    // that ran backwards) proves nothing about freshness either, but for the rounding of stamps.
     let age_ns = standing
         .age_ns(now)
         .map(|age_ns| if (-CONTIGUITY_NS..0).contains(&age_ns) { 0 } else { age_ns })

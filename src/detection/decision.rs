@@ -18,8 +18,9 @@ pub struct Integrity {
     pub reasons: Reasons,
 }
 
-/// Everything about a decision that does not depend on the samples: the floor model and, per channel,
-/// thresholds and sensitivities. Made once for each number of transforms that a dwell can have.
+/// Everything about a decision that does not depend on the samples: the floor model and, per
+/// channel, thresholds and sensitivities. Made once for each number of transforms that a dwell can
+/// have.
 #[derive(Clone, Debug)]
 pub struct Decision {
     model: FloorModel,
@@ -80,8 +81,8 @@ impl Decision {
 
     /// The verdicts of one dwell, appended to `verdicts`.
     ///
-    /// `spectrum` is the dwell's averaged power per bin by rising frequency; `scratch` is
-    /// reused from dwell to dwell.
+    /// `spectrum` is the dwell's averaged power per bin by rising frequency; `scratch` is reused
+    /// from dwell to dwell.
     pub fn decide(
         &self,
         layout: &Layout,

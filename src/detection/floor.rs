@@ -1,15 +1,15 @@
 //! The noise floor across the reference cells of one dwell.
 //!
-//! The floor is a smooth curve, `exp(b0 + b1 x + ...)` over the position `x` across the block. Noise
-//! energies are gamma variates around it, so the maximum-likelihood fit solves
-//! `sum looks_i basis_i (energy_i / floor_i - 1) = 0` (a gamma model with logarithmic link, McCullagh &
-//! Nelder, "Generalized linear models", 1989). For a flat floor it is the plain weighted mean of the
-//! cells, so the ratio test is cell-averaging CFAR.
+//! The floor is a smooth curve, `exp(b0 + b1 x + ...)` over the position `x` across the block.
+//! Noise energies are gamma variates around it, so the maximum-likelihood fit solves `sum looks_i
+//! basis_i (energy_i / floor_i - 1) = 0` (a gamma model with logarithmic link, McCullagh & Nelder,
+//! "Generalized linear models", 1989). For a flat floor it is the plain weighted mean of the cells,
+//! so the ratio test is cell-averaging CFAR.
 //!
-//! Occupied cells must not lift the floor. Excision starts from the lowest cells and lets the fit grow
-//! towards all cells under a threshold (forward consecutive mean excision, Lehtomaki et al. 2007),
-//! which holds while a fair share of every part of the block is idle. The share of noise that each step
-//! cuts off is corrected by the mean of the truncated gamma distribution.
+//! Occupied cells must not lift the floor. Excision starts from the lowest cells and lets the fit
+//! grow towards all cells under a threshold (forward consecutive mean excision, Lehtomaki et al.
+//! 2007), which holds while a fair share of every part of the block is idle. The share of noise
+//! that each step cuts off is corrected by the mean of the truncated gamma distribution.
 
 use super::layout::ReferenceCell;
 use super::plan::{FloorEstimator, FloorSettings, FloorTrend};
@@ -132,9 +132,9 @@ impl FloorModel {
     /// Fits the floor to one dwell's mean power per bin of every cell. Returns whether enough cells
     /// are left to tell it: as many as the trend has terms.
     ///
-    /// Few cells are no danger: a signal in a cell can only lift the floor, so `occupied` is claimed
-    /// against too high a floor, and `idle` only where the sensitivity over that same floor still
-    /// reaches the protection level. The estimate's variance enters both.
+    /// Few cells are no danger: a signal in a cell can only lift the floor, so `occupied` is
+    /// claimed against too high a floor, and `idle` only where the sensitivity over that same floor
+    /// still reaches the protection level. The estimate's variance enters both.
     ///
     /// # Panics
     /// If there is not one positive, finite energy per cell.
@@ -167,8 +167,9 @@ impl FloorModel {
         true
     }
 
-    /// A line through the lowest cell of each group, robust against groups that are full: the median
-    /// of the slopes between any two groups (Theil 1950, Sen 1968), then the median of what is left.
+    /// A line through the lowest cell of each group, robust against groups that are full: the
+    /// median of the slopes between any two groups (Theil 1950, Sen 1968), then the median of what
+    /// is left.
     fn first_guess(&self, absent: Option<usize>, energies: &[f64]) -> Option<Coefficients> {
         let mut points = [(0.0, 0.0); GROUPS_MAX];
         let mut count = 0;
@@ -205,7 +206,8 @@ impl FloorModel {
         Some(coefficients)
     }
 
-    /// Keeps the cells whose energy lies under their threshold; tells whether that changed anything.
+    /// Keeps the cells whose energy lies under their threshold; tells whether that changed
+    /// anything.
     fn choose(&self, absent: Option<usize>, energies: &[f64], fit: &mut FloorFit) -> bool {
         let mut changed = false;
         for (i, cell) in self.cells.iter().enumerate() {
@@ -248,11 +250,11 @@ impl FloorModel {
         true
     }
 
-    /// The floor at a position, without the help of the cell `own`: numerator and denominator of the
-    /// ratio test are then independent. `None` where the other cells cannot tell.
+    /// The floor at a position, without the help of the cell `own`: numerator and denominator of
+    /// the ratio test are then independent. `None` where the other cells cannot tell.
     ///
-    /// One Newton step takes a cell out that carries little of the fit; for a flat floor it is exact.
-    /// Where the cell carries much, the floor is fitted anew into `spare`.
+    /// One Newton step takes a cell out that carries little of the fit; for a flat floor it is
+    /// exact. Where the cell carries much, the floor is fitted anew into `spare`.
     pub fn at(
         &self,
         fit: &FloorFit,
@@ -342,8 +344,8 @@ fn median(values: &mut [f64]) -> f64 {
     if values.len() % 2 == 1 { values[half] } else { 0.5 * (values[half - 1] + values[half]) }
 }
 
-/// Solves a symmetric positive definite system of up to three unknowns (Cholesky); `None` where it is
-/// not positive definite to working precision.
+/// Solves a symmetric positive definite system of up to three unknowns (Cholesky); `None` where it
+/// is not positive definite to working precision.
 fn solve_positive(
     matrix: &Information,
     right: &Coefficients,

@@ -2,8 +2,8 @@
 
 use super::plan::{Channel, Plan};
 
-/// A stretch of neighbouring whole bins, as a half-open range by rising frequency. Bins of the DC guard
-/// inside it do not count.
+/// A stretch of neighbouring whole bins, as a half-open range by rising frequency. Bins of the DC
+/// guard inside it do not count.
 ///
 /// Whole bins, so that the distribution of the energy depends on their number alone; what the edges
 /// miss or hold too much of a channel is at most half a bin each, and levels are referred to the
@@ -14,7 +14,8 @@ pub struct BinSpan {
     pub first: usize,
     /// The bin after the last.
     pub end: usize,
-    /// First bin of the DC guard within the span, and the bin after its last; equal where there is none.
+    /// First bin of the DC guard within the span, and the bin after its last; equal where there is
+    /// none.
     pub guard: (usize, usize),
 }
 
@@ -68,7 +69,8 @@ pub struct Layout {
     pub references: Vec<ReferenceCell>,
 }
 
-/// The least that a cell between channels may be [bins]: smaller ones tell little and cost the same.
+/// The least that a cell between channels may be [bins]: smaller ones tell little and cost the
+/// same.
 const CELL_BINS_MIN: usize = 8;
 
 /// Cells between channels are made no wider than this share of the usable bandwidth, so that a
@@ -80,8 +82,8 @@ impl Layout {
     /// the others serve as reference only.
     ///
     /// # Panics
-    /// If a channel has no bin left outside the DC guard or lies outside the block: the configuration
-    /// has checked both.
+    /// If a channel has no bin left outside the DC guard or lies outside the block: the
+    /// configuration has checked both.
     pub fn new(plan: &Plan, wanted: &[usize]) -> Layout {
         let grid = Grid::new(plan);
         let mut references: Vec<(ReferenceCell, Option<usize>)> = plan

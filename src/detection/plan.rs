@@ -13,7 +13,8 @@ pub struct Receiver {
     pub sample_rate_hz: f64,
     /// Width around the centre in which the front end is trusted (Hz), at most the sample rate.
     pub usable_bandwidth_hz: f64,
-    /// Width around the centre that is left out of every channel and reference cell (Hz), 0 or more.
+    /// Width around the centre that is left out of every channel and reference cell (Hz), 0 or
+    /// more.
     pub dc_guard_hz: f64,
 }
 

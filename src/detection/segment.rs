@@ -1,7 +1,7 @@
 //! The detector of one segment: the channels of the block whose bands share a dwell length.
 //!
-//! Samples stream through: transforms are taken as soon as their samples are there, slices and dwells
-//! are sums. Nothing of the samples is kept but what the next transform overlaps.
+//! Samples stream through: transforms are taken as soon as their samples are there, slices and
+//! dwells are sums. Nothing of the samples is kept but what the next transform overlaps.
 
 use num_complex::Complex32;
 
@@ -15,9 +15,9 @@ use super::time::{Stamp, samples_to_nanos};
 use super::timing::Timing;
 use super::verdict::{DwellReport, Reason};
 
-/// A dwell with a larger share of samples at the converter's limits supports no claim: clipping spreads
-/// a strong signal over the whole block. At 12 dB of headroom noise reaches the limits in fewer than
-/// 1e-6 of samples.
+/// A dwell with a larger share of samples at the converter's limits supports no claim: clipping
+/// spreads a strong signal over the whole block. At 12 dB of headroom noise reaches the limits in
+/// fewer than 1e-6 of samples.
 pub const CLIPPED_SHARE_MAX: f64 = 1e-5;
 
 /// Detector of one segment.
@@ -70,7 +70,8 @@ impl DwellInProgress {
 }
 
 impl SegmentDetector {
-    /// For the plan's channels with the given indices, whose bands ask for the same dwell and slice.
+    /// For the plan's channels with the given indices, whose bands ask for the same dwell and
+    /// slice.
     ///
     /// # Panics
     /// If there is no channel, or the plan is not a checked one.
@@ -134,7 +135,8 @@ impl SegmentDetector {
         let mut from = 0;
         while self.pending.len() - from >= length {
             let samples = &self.pending[from..from + length];
-            // A receiver that listens delivers noise. The first sample that is not zero ends the look.
+            // A receiver that listens delivers noise. The first sample that is not zero ends the
+            // look.
             self.dwell.silent |= samples.iter().all(|sample| *sample == Complex32::ZERO);
             self.spectrum.accumulate(samples, &mut self.dwell.slice_power);
             from += self.timing.hop;

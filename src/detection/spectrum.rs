@@ -11,7 +11,8 @@ use super::window::Window;
 /// allocated after construction.
 pub struct Spectrum {
     transform: Arc<dyn Fft<f32>>,
-    /// Window values divided by `sqrt(N sum w^2)`, so that the bins of white noise sum to its power.
+    /// Window values divided by `sqrt(N sum w^2)`, so that the bins of white noise sum to its
+    /// power.
     taper: Vec<f32>,
     buffer: Vec<Complex32>,
     scratch: Vec<Complex32>,

@@ -47,7 +47,8 @@ impl ChannelStanding {
         self.end.monotonic_ns - self.since.monotonic_ns
     }
 
-    /// Age of the evidence: time from the newest dwell's end to `now` (ns); `None` before the first.
+    /// Age of the evidence: time from the newest dwell's end to `now` (ns); `None` before the
+    /// first.
     pub fn age_ns(&self, now: Stamp) -> Option<i64> {
         self.verdict.map(|_| now.monotonic_ns - self.end.monotonic_ns)
     }

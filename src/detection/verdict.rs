@@ -168,7 +168,8 @@ pub struct DwellReport {
     /// Energy of each slice in each of those channels: mean power in the channel's bandwidth (dB),
     /// `slice_power_db[slice * verdicts.len() + i]`; empty when the dwell could not be measured.
     pub slice_power_db: Vec<f32>,
-    /// The dwell's averaged spectrum, lowest frequency first: power per bin, linear, full scale = 1.
+    /// The dwell's averaged spectrum, lowest frequency first: power per bin, linear, full scale =
+    /// 1.
     pub spectrum: Vec<f32>,
 }
 

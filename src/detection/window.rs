@@ -1,6 +1,7 @@
 //! Tapers for the transform, and the few numbers that follow from them.
 
-/// A taper. Both are periodic (DFT-even): the sum that the transform sees has no repeated end point.
+/// A taper. Both are periodic (DFT-even): the sum that the transform sees has no repeated end
+/// point.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Window {
     /// Hann, raised cosine: narrow main lobe, side lobes from -31 dB falling at 18 dB an octave.

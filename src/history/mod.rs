@@ -41,8 +41,8 @@ pub struct Identity {
     pub configuration_text: String,
 }
 
-/// What a row of a run takes in the file, its share of the interior pages included (bytes); measured
-/// by `a_row_takes_the_space_that_is_stated`.
+/// What a row of a run takes in the file, its share of the interior pages included (bytes);
+/// measured by `a_row_takes_the_space_that_is_stated`.
 pub const RUN_ROW_BYTES: f64 = 47.0;
 
 /// What a row of a quarter hour takes in the file (bytes); measured likewise.

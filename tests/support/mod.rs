@@ -112,9 +112,9 @@ pub fn detect(
     reports
 }
 
-/// A record of white noise (`noise_power` over the whole block) with noise-like signals that fill the
-/// channels for which `snr_db` gives a ratio over the noise in the channel. Signals are made bin by bin
-/// over the whole record, so their edges are sharp and their power is exact on average.
+/// A record of white noise (`noise_power` over the whole block) with noise-like signals that fill
+/// the channels for which `snr_db` gives a ratio over the noise in the channel. Signals are made
+/// bin by bin over the whole record, so their edges are sharp and their power is exact on average.
 pub fn record(
     plan: &Plan,
     count: usize,

@@ -148,17 +148,21 @@ impl Capture {
             let shared = &self.closing.0;
             shared.samples_read.fetch_add(length as u64, Ordering::Relaxed);
             shared.clipped.fetch_add(block.clipped as u64, Ordering::Relaxed);
+            // A gap is counted when it begins, before any block that tells of it can be read: at a
+            // gap of the source, or at the first of the blocks that are dropped in a row.
+            let begun = shared.blocks.load(Ordering::Relaxed) > 0 && !self.lost;
+            let source_gap = block.gap_before;
+            shared.gaps.fetch_add(u64::from(begun && source_gap), Ordering::Relaxed);
             block.gap_before |= self.lost;
-            let gap = block.gap_before;
+            // Likewise: whoever holds the block must find it counted.
+            shared.blocks.fetch_add(1, Ordering::Relaxed);
             match self.filled.try_send(block) {
-                Ok(()) => {
-                    let first = shared.blocks.fetch_add(1, Ordering::Relaxed) == 0;
-                    shared.gaps.fetch_add(u64::from(gap && !first), Ordering::Relaxed);
-                    self.lost = false;
-                }
+                Ok(()) => self.lost = false,
                 Err(TrySendError::Full(block)) => {
+                    shared.blocks.fetch_sub(1, Ordering::Relaxed);
                     shared.blocks_dropped.fetch_add(1, Ordering::Relaxed);
                     shared.samples_dropped.fetch_add(length as u64, Ordering::Relaxed);
+                    shared.gaps.fetch_add(u64::from(begun && !source_gap), Ordering::Relaxed);
                     self.lost = true;
                     kept = Some(block);
                 }

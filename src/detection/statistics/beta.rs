@@ -3,7 +3,8 @@
 use super::gamma::{deviance, stirling_error, wilson_hilferty};
 use super::{normal, solve_upper_tail};
 
-/// `x^a (1-x)^b / B(a, b)`, from Stirling's errors and deviances so that large shapes keep precision.
+/// `x^a (1-x)^b / B(a, b)`, from Stirling's errors and deviances so that large shapes keep
+/// precision.
 fn common_factor(a: f64, b: f64, x: f64, complement: f64) -> f64 {
     let n = a + b;
     let exponent = stirling_error(n)
@@ -36,7 +37,8 @@ fn with_complement(a: f64, b: f64, x: f64, complement: f64) -> f64 {
     }
 }
 
-/// Lentz's continued fraction for I_x(a, b) without its factor; converges in O(sqrt(max(a, b))) steps.
+/// Lentz's continued fraction for I_x(a, b) without its factor; converges in O(sqrt(max(a, b)))
+/// steps.
 fn continued_fraction(a: f64, b: f64, x: f64) -> f64 {
     const TINY: f64 = 1e-300;
     let guard = |value: f64| if value.abs() < TINY { TINY } else { value };
@@ -61,8 +63,9 @@ fn continued_fraction(a: f64, b: f64, x: f64) -> f64 {
     h
 }
 
-/// Probability that the ratio of two independent gamma variates of mean 1, with the given shapes above
-/// and below the line, exceeds `ratio` (upper tail of F with `2 * shape` degrees of freedom each).
+/// Probability that the ratio of two independent gamma variates of mean 1, with the given shapes
+/// above and below the line, exceeds `ratio` (upper tail of F with `2 * shape` degrees of freedom
+/// each).
 ///
 /// # Panics
 /// If a shape or the ratio is not positive.

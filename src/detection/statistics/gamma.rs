@@ -1,13 +1,14 @@
 //! The gamma distribution: tails and quantiles for any shape from below 1 to many millions.
 //!
 //! The common factor `x^a e^-x / Gamma(a+1)` is computed from Stirling's error and the deviance
-//! (Loader, "Fast and accurate computation of binomial probabilities", 2000), which keeps full relative
-//! precision where the plain form would lose six digits at a shape of 1e5.
+//! (Loader, "Fast and accurate computation of binomial probabilities", 2000), which keeps full
+//! relative precision where the plain form would lose six digits at a shape of 1e5.
 
 use super::normal;
 use super::solve_upper_tail;
 
-/// `ln Gamma(a + 1) - ((a + 1/2) ln a - a + ln(2 pi)/2)` for `a > 0`: the error of Stirling's formula.
+/// `ln Gamma(a + 1) - ((a + 1/2) ln a - a + ln(2 pi)/2)` for `a > 0`: the error of Stirling's
+/// formula.
 pub(crate) fn stirling_error(a: f64) -> f64 {
     if a <= 15.0 {
         let half_ln_two_pi = 0.918_938_533_204_672_8;
@@ -66,8 +67,8 @@ pub fn lower_tail(shape: f64, x: f64) -> f64 {
     }
 }
 
-/// Probability that a gamma variate of the given shape and scale 1 exceeds `x`: the regularised upper
-/// incomplete gamma function Q(a, x). Relative error below 1e-11 for shapes up to 1e6.
+/// Probability that a gamma variate of the given shape and scale 1 exceeds `x`: the regularised
+/// upper incomplete gamma function Q(a, x). Relative error below 1e-11 for shapes up to 1e6.
 ///
 /// # Panics
 /// If `shape` is not positive or `x` is negative.
@@ -132,8 +133,8 @@ pub fn upper_quantile(shape: f64, probability: f64) -> f64 {
     })
 }
 
-/// Quantile of a gamma variate of the given shape and mean 1 at the normal deviate `z`, approximately:
-/// good to a few parts in a thousand from a shape of 4. Never negative.
+/// Quantile of a gamma variate of the given shape and mean 1 at the normal deviate `z`,
+/// approximately: good to a few parts in a thousand from a shape of 4. Never negative.
 ///
 /// Source: Wilson & Hilferty, Proc. Nat. Acad. Sci. 17, 1931.
 pub fn wilson_hilferty(shape: f64, z: f64) -> f64 {

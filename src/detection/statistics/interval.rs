@@ -15,14 +15,16 @@ pub fn wilson(hits: u64, trials: u64, confidence: f64) -> (f64, f64) {
     (((middle - half) / scale).max(0.0), ((middle + half) / scale).min(1.0))
 }
 
-/// The exact (Clopper-Pearson) interval for `hits` out of `trials` at the given confidence (0 to 1).
+/// The exact (Clopper-Pearson) interval for `hits` out of `trials` at the given confidence (0 to
+/// 1).
 ///
 /// Source: NIST/SEMATECH e-Handbook of Statistical Methods, section 7.2.4.2.
 pub fn clopper_pearson(hits: u64, trials: u64, confidence: f64) -> (f64, f64) {
     assert!(hits <= trials && trials > 0, "{hits} of {trials}");
     let (k, n) = (hits as f64, trials as f64);
     let tail = 0.5 * (1.0 - confidence);
-    // Odds that leave `probability` of a beta(a, b) variate above them; odds map (0, 1) to (0, inf).
+    // Odds that leave `probability` of a beta(a, b) variate above them; odds map (0, 1) to (0,
+    // inf).
     let beta_upper_quantile = |a: f64, b: f64, probability: f64| {
         let odds = solve_upper_tail(probability, a / b, |odds| {
             let step = 1e-6 * odds;

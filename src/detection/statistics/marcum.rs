@@ -2,8 +2,8 @@
 
 use super::gamma::{deviance, stirling_error, upper_tail};
 
-/// Generalised Marcum Q function `Q_m(a, b)` of any real order `m > 0`, for `a, b >= 0`: a mixture of
-/// gamma tails with Poisson weights, `sum_k Poisson(k; a^2/2) Q(m + k, b^2/2)`.
+/// Generalised Marcum Q function `Q_m(a, b)` of any real order `m > 0`, for `a, b >= 0`: a mixture
+/// of gamma tails with Poisson weights, `sum_k Poisson(k; a^2/2) Q(m + k, b^2/2)`.
 ///
 /// The sum runs over the weights that matter, upwards, so that each gamma tail follows from the one
 /// before by adding a positive term.
@@ -13,8 +13,8 @@ pub fn generalised_q(order: f64, a: f64, b: f64) -> f64 {
     if mean == 0.0 || x == 0.0 {
         return upper_tail(order, x);
     }
-    // 20 standard deviations and 20 counts either side hold all but some 1e-85 of the weight, and the
-    // first weight stays within the range of a double.
+    // 20 standard deviations and 20 counts either side hold all but some 1e-85 of the weight, and
+    // the first weight stays within the range of a double.
     let reach = 20.0 * (mean.sqrt() + 1.0);
     let first = (mean - reach).floor().max(0.0);
     let last = (mean + reach).ceil();

@@ -1,7 +1,7 @@
 //! Distributions behind the decisions: tails, quantiles, equivalent looks, intervals.
 //!
-//! All are pure functions of doubles. Upper tails are computed as such, never as one minus the lower
-//! tail, so that a false-alarm probability of 1e-9 has as many good digits as one of 1e-1.
+//! All are pure functions of doubles. Upper tails are computed as such, never as one minus the
+//! lower tail, so that a false-alarm probability of 1e-9 has as many good digits as one of 1e-1.
 
 pub mod beta;
 pub mod energy;
@@ -16,8 +16,8 @@ pub mod weights;
 /// Solves `ln tail(x) = ln target` for a tail that falls with `x`, by Newton steps on the logarithm
 /// kept inside a shrinking bracket.
 ///
-/// `tail` returns the upper tail probability and the density at `x > 0`. `start` is any guess.
-/// The logarithm of a tail is nearly quadratic, so a handful of steps reaches full precision.
+/// `tail` returns the upper tail probability and the density at `x > 0`. `start` is any guess. The
+/// logarithm of a tail is nearly quadratic, so a handful of steps reaches full precision.
 pub(crate) fn solve_upper_tail(target: f64, start: f64, tail: impl Fn(f64) -> (f64, f64)) -> f64 {
     assert!(target > 0.0 && target < 1.0, "a probability between 0 and 1, got {target}");
     let (mut low, mut high) = (0.0_f64, f64::INFINITY);

@@ -1,16 +1,17 @@
-//! Sums of gamma variates: the exact distribution of a channel's energy, and of its ratio to a floor.
+//! Sums of gamma variates: the exact distribution of a channel's energy, and of its ratio to a
+//! floor.
 //!
-//! For white noise the energy of a channel, summed over bins and overlapped transforms, is a quadratic
-//! form in correlated complex Gaussians: `sum lambda_j E_j` with exponential `E_j`, where the weights
-//! `lambda_j` are the eigenvalues of their covariance (see [`super::weights`]). Equal or merged weights
-//! make gamma variates, so a [`GammaSum`] is `sum scale_j Gamma(shape_j)`.
+//! For white noise the energy of a channel, summed over bins and overlapped transforms, is a
+//! quadratic form in correlated complex Gaussians: `sum lambda_j E_j` with exponential `E_j`, where
+//! the weights `lambda_j` are the eigenvalues of their covariance (see [`super::weights`]). Equal
+//! or merged weights make gamma variates, so a [`GammaSum`] is `sum scale_j Gamma(shape_j)`.
 //!
-//! Tails come from numerical inversion of the moment generating function along a contour through the
-//! saddlepoint (Rice, "Distribution of quadratic forms in normal random variables: evaluation by
-//! numerical integration", SIAM J. Sci. Stat. Comput. 1, 1980). There the integrand neither oscillates
-//! nor cancels, so the *relative* error stays near rounding however far out the tail is; a saddlepoint
-//! formula alone would be off by up to a few per cent for a handful of looks, and Imhof's integral
-//! along the imaginary axis loses all digits at 1e-9.
+//! Tails come from numerical inversion of the moment generating function along a contour through
+//! the saddlepoint (Rice, "Distribution of quadratic forms in normal random variables: evaluation
+//! by numerical integration", SIAM J. Sci. Stat. Comput. 1, 1980). There the integrand neither
+//! oscillates nor cancels, so the *relative* error stays near rounding however far out the tail is;
+//! a saddlepoint formula alone would be off by up to a few per cent for a handful of looks, and
+//! Imhof's integral along the imaginary axis loses all digits at 1e-9.
 
 use num_complex::Complex64;
 
@@ -126,8 +127,8 @@ impl GammaSum {
         Inversion::new(self, Some(&other.scaled(ratio)), 0.0).upper_tail()
     }
 
-    /// The ratio to an independent other sum that is exceeded with the given probability. `start` is a
-    /// guess; one within a few per cent saves half the work.
+    /// The ratio to an independent other sum that is exceeded with the given probability. `start`
+    /// is a guess; one within a few per cent saves half the work.
     ///
     /// # Panics
     /// If `probability` is not between 0 and 1 (both excluded).
@@ -135,7 +136,8 @@ impl GammaSum {
         solve_upper_tail(probability, start, |ratio| {
             let below = other.scaled(ratio);
             let inversion = Inversion::new(self, Some(&below), 0.0);
-            // d/dratio of the cumulant of `-ratio other` at `s` is `-s` times the other's own slope.
+            // d/dratio of the cumulant of `-ratio other` at `s` is `-s` times the other's own
+            // slope.
             let slope = |s: Complex64| {
                 let term =
                     |t: &Term| (Complex64::ONE + s * t.scale).inv() * (t.scale * t.shape / ratio);
@@ -201,7 +203,8 @@ impl<'a> Inversion<'a> {
         (first, second)
     }
 
-    /// Solves `K'(s) = x` in the domain, by Newton steps inside a bracket; `K'` rises from end to end.
+    /// Solves `K'(s) = x` in the domain, by Newton steps inside a bracket; `K'` rises from end to
+    /// end.
     fn saddlepoint(&self) -> f64 {
         let (mut low, mut high) = self.domain();
         let unit = high;
@@ -231,13 +234,13 @@ impl<'a> Inversion<'a> {
         self.above.cumulant(s) + below - s * self.x
     }
 
-    /// `1/(2 pi i)` times the integral of `exp(K(s) - s x) f(s)` over the contour: half of it by the
-    /// trapezoidal rule, which converges exponentially for an analytic integrand that dies out; the
-    /// other half is its mirror image.
+    /// `1/(2 pi i)` times the integral of `exp(K(s) - s x) f(s)` over the contour: half of it by
+    /// the trapezoidal rule, which converges exponentially for an analytic integrand that dies out;
+    /// the other half is its mirror image.
     ///
-    /// The contour is `s = c + i y + b y^2`. It bends to the right, around the singularities of `above`
-    /// (all on the real axis beyond `c`), where `exp(-s x)` dies out fast however few looks there are.
-    /// With `y = sinh(u)/spread` it also dies out fast for a ratio, where `x` is 0.
+    /// The contour is `s = c + i y + b y^2`. It bends to the right, around the singularities of
+    /// `above` (all on the real axis beyond `c`), where `exp(-s x)` dies out fast however few looks
+    /// there are. With `y = sinh(u)/spread` it also dies out fast for a ratio, where `x` is 0.
     fn contour(&self, weight: impl Fn(Complex64) -> Complex64) -> f64 {
         const STEP: f64 = 0.08;
         let peak = self.exponent(Complex64::from(self.crossing)).re;

@@ -1,16 +1,16 @@
 //! Threshold and sensitivity when the noise floor is itself an estimate.
 //!
-//! The test divides a channel's energy by an estimated floor that is independent of it. The energy's
-//! distribution is the exact one ([`super::quadratic::GammaSum`]). The floor's is that of `R` reference
-//! cells of the channel's own kind, with `R` such that the estimate's variance is right: the same terms,
-//! each with `R` times the shape. For one look and `R` cells this is the textbook cell-averaging
-//! multiplier `R (pfa^(-1/R) - 1)`; for averaged looks it is the F distribution. A known floor has
-//! infinitely many looks.
+//! The test divides a channel's energy by an estimated floor that is independent of it. The
+//! energy's distribution is the exact one ([`super::quadratic::GammaSum`]). The floor's is that of
+//! `R` reference cells of the channel's own kind, with `R` such that the estimate's variance is
+//! right: the same terms, each with `R` times the shape. For one look and `R` cells this is the
+//! textbook cell-averaging multiplier `R (pfa^(-1/R) - 1)`; for averaged looks it is the F
+//! distribution. A known floor has infinitely many looks.
 
 use super::quadratic::{GammaSum, Term};
 
-/// The ratio that noise alone exceeds with probability `probability`, for a channel's energy of mean 1
-/// and a floor of `looks_floor` equivalent looks.
+/// The ratio that noise alone exceeds with probability `probability`, for a channel's energy of
+/// mean 1 and a floor of `looks_floor` equivalent looks.
 ///
 /// # Panics
 /// If `looks_floor` is not positive or `probability` not between 0 and 1 (both excluded).
@@ -30,8 +30,8 @@ fn floor_of(energy: &GammaSum, looks_floor: f64) -> GammaSum {
     GammaSum::new(energy.terms().iter().map(shared).collect())
 }
 
-/// The smallest SNR (linear) of a noise-like signal that fills the channel at which the ratio exceeds
-/// `threshold` with probability `pd`: the signal scales the channel's energy by `1 + snr`.
+/// The smallest SNR (linear) of a noise-like signal that fills the channel at which the ratio
+/// exceeds `threshold` with probability `pd`: the signal scales the channel's energy by `1 + snr`.
 ///
 /// At least 0: a threshold below 1 is met by noise alone.
 pub fn required_snr(energy: &GammaSum, looks_floor: f64, threshold: f64, pd: f64) -> f64 {
@@ -39,8 +39,8 @@ pub fn required_snr(energy: &GammaSum, looks_floor: f64, threshold: f64, pd: f64
     (threshold / reached - 1.0).max(0.0)
 }
 
-/// Thresholds and required SNR of one channel for any number of floor looks, tabulated once: a dwell
-/// then costs two interpolations a channel instead of two root searches.
+/// Thresholds and required SNR of one channel for any number of floor looks, tabulated once: a
+/// dwell then costs two interpolations a channel instead of two root searches.
 ///
 /// Both are smooth in the relative spread `v = sqrt(1 + looks_channel / looks_floor)`; a parabola
 /// through three neighbours of their logarithms is good to 1e-4 even for a single look.

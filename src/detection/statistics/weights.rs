@@ -7,16 +7,17 @@
 //! E X(k, i) X*(l, j) = e^(2 pi i l m hop / N) sum_n w(n) w(n + m hop) e^(-2 pi i (k - l) n / N)
 //! ```
 //!
-//! times the noise power. The energy `sum |X(k, i)|^2` over `K` transforms and `B` bins is then a sum of
-//! exponentials weighted by the eigenvalues of this `K B` by `K B` matrix. Up to some hundreds of terms
-//! they are computed as such.
+//! times the noise power. The energy `sum |X(k, i)|^2` over `K` transforms and `B` bins is then a
+//! sum of exponentials weighted by the eigenvalues of this `K B` by `K B` matrix. Up to some
+//! hundreds of terms they are computed as such.
 //!
-//! Beyond that the structure helps. The matrix depends on differences only (up to phases) and is banded
-//! both in time (windows that no longer meet) and in frequency (the transform of `w^2` dies out), so
-//! every trace `tr C^p`, and with it the whole cumulant generating function, grows linearly in `K` and in
-//! `B` once both are wider than the bands: corners, edges and inside add up. Four small boxes give the
-//! law for all sizes. The weights that it implies are condensed into a few gamma variates by Gauss
-//! quadrature (Golub & Welsch 1969), which keeps the first [`2 NODES`](NODES) cumulants.
+//! Beyond that the structure helps. The matrix depends on differences only (up to phases) and is
+//! banded both in time (windows that no longer meet) and in frequency (the transform of `w^2` dies
+//! out), so every trace `tr C^p`, and with it the whole cumulant generating function, grows
+//! linearly in `K` and in `B` once both are wider than the bands: corners, edges and inside add up.
+//! Four small boxes give the law for all sizes. The weights that it implies are condensed into a
+//! few gamma variates by Gauss quadrature (Golub & Welsch 1969), which keeps the first [`2
+//! NODES`](NODES) cumulants.
 
 use std::collections::HashMap;
 
@@ -199,8 +200,8 @@ fn condense(measure: &[(f64, f64)], trace: f64) -> Vec<(f64, f64)> {
         }
         norm_before = norm;
     }
-    // The smallest nodes can fall below 0, where the signed multiplicities do not carry any further;
-    // a leading part of the matrix is the quadrature with fewer nodes.
+    // The smallest nodes can fall below 0, where the signed multiplicities do not carry any
+    // further; a leading part of the matrix is the quadrature with fewer nodes.
     (1..=diagonal.len())
         .rev()
         .find_map(|size| quadrature(&diagonal[..size], &off_diagonal[..size - 1]))
