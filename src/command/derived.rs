@@ -4,11 +4,12 @@ use serde::Serialize;
 
 use crate::config::idle_offer_share;
 use crate::daemon::{QUEUE_BLOCKS, block_samples};
-use crate::detection::decision::{Integrity, Scratch};
+use crate::detection::decision::{Evidence, Scratch};
 use crate::detection::detector::Detector;
+use crate::detection::memory::FloorMemory;
 use crate::detection::plan::{Band, Plan};
 use crate::detection::segment::SegmentDetector;
-use crate::detection::verdict::Levels;
+use crate::detection::verdict::{Levels, Reasons};
 use crate::history::{Options, QUARTER_ROW_BYTES, RUN_ROW_BYTES, quarters_per_day};
 
 /// Transmissions an hour that a channel is taken to hold where growth is estimated: common practice
@@ -155,7 +156,10 @@ fn idle_dwell(plan: &Plan, segment: &mut SegmentDetector) -> Vec<Option<Levels>>
     let mut verdicts = Vec::new();
     let mut scratch = Scratch::default();
     let decision = segment.decision(slices);
-    decision.decide(&layout, &spectrum, Integrity::default(), &mut scratch, &mut verdicts);
+    let evidence =
+        Evidence { spectrum: &spectrum, slices: &[], reasons: Reasons::NONE, observed_ns: 0 };
+    let mut memory = FloorMemory::default();
+    decision.decide(&layout, evidence, &mut memory, &mut scratch, &mut verdicts);
     verdicts.into_iter().map(|verdict| verdict.levels).collect()
 }
 

@@ -3,50 +3,86 @@
 use std::collections::HashMap;
 use std::sync::Arc;
 
+use super::burst::{BURST_SHARE, BurstTest, slice_factors};
 use super::floor::{FloorAt, FloorFit, FloorModel};
 use super::layout::{ChannelSpan, Layout};
+use super::memory::FloorMemory;
 use super::plan::Plan;
-use super::statistics::quadratic::GammaSum;
 use super::statistics::ratio::RatioTable;
 use super::statistics::weights::Weights;
 use super::verdict::{Levels, Reason, Reasons, State, Verdict};
 
-/// What makes a whole dwell unfit for some or all claims.
-#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
-pub struct Integrity {
+/// What one dwell has gathered.
+#[derive(Clone, Copy, Debug)]
+pub struct Evidence<'a> {
+    /// Averaged power per bin by rising frequency.
+    pub spectrum: &'a [f32],
+    /// Mean power per bin of every reference cell of the layout, slice after slice; empty when the
+    /// dwell was not sliced.
+    pub slices: &'a [f32],
     /// Reasons that turn every verdict of the dwell into `unknown`.
     pub reasons: Reasons,
+    /// Length of the dwell (ns).
+    pub observed_ns: i64,
+}
+
+/// The tests of one kind of channel: all that have the same number of bins and the same band.
+#[derive(Clone, Debug)]
+struct Tests {
+    dwell: RatioTable,
+    /// `None` for a dwell of a single slice.
+    burst: Option<BurstTest>,
 }
 
 /// Everything about a decision that does not depend on the samples: the floor model and, per
-/// channel, thresholds and sensitivities. Made once for each number of transforms that a dwell can
+/// channel, thresholds and sensitivities. Made once for each number of slices that a dwell can
 /// have.
 #[derive(Clone, Debug)]
 pub struct Decision {
     model: FloorModel,
-    tables: Vec<Arc<RatioTable>>,
+    tests: Vec<Arc<Tests>>,
     protection_levels_db: Vec<f64>,
     reference_looks: f64,
 }
 
 impl Decision {
-    /// For dwells of `transforms` transforms.
-    pub fn new(plan: &Plan, layout: &Layout, weights: &mut Weights, transforms: usize) -> Decision {
-        let mut energies: HashMap<usize, GammaSum> = HashMap::new();
-        let mut energy_of = |bins: usize| {
-            energies.entry(bins).or_insert_with(|| weights.energy(transforms, bins)).clone()
-        };
-        let cell_looks: Vec<f64> =
-            layout.references.iter().map(|cell| energy_of(cell.span.bins()).looks()).collect();
-        let mut shared: HashMap<(usize, usize), Arc<RatioTable>> = HashMap::new();
-        let tables: Vec<Arc<RatioTable>> = layout
+    /// For dwells of `slices` slices of `transforms_per_slice` transforms each.
+    pub fn new(
+        plan: &Plan,
+        layout: &Layout,
+        weights: &mut Weights,
+        transforms_per_slice: usize,
+        slices: usize,
+    ) -> Decision {
+        let transforms = transforms_per_slice * slices;
+        let mut looks_of: HashMap<usize, f64> = HashMap::new();
+        let cell_looks: Vec<f64> = layout
+            .references
+            .iter()
+            .map(|cell| {
+                let bins = cell.span.bins();
+                let looks = || weights.energy(transforms, bins).looks();
+                *looks_of.entry(bins).or_insert_with(looks)
+            })
+            .collect();
+        let mut shared: HashMap<(usize, usize), Arc<Tests>> = HashMap::new();
+        let tests: Vec<Arc<Tests>> = layout
             .channels
             .iter()
             .map(|channel| {
                 let band_index = plan.channels[channel.channel_index].band_index;
                 let band = &plan.bands[band_index];
                 let bins = channel.span.bins();
-                let make = || Arc::new(RatioTable::new(energy_of(bins), band.pfa, band.pd));
+                let make = || {
+                    let for_slices = if slices > 1 { BURST_SHARE } else { 0.0 };
+                    let pfa = (1.0 - for_slices) * band.pfa;
+                    let dwell = RatioTable::new(weights.energy(transforms, bins), pfa, band.pd);
+                    let burst = (slices > 1).then(|| {
+                        let energy = weights.energy(transforms_per_slice, bins);
+                        BurstTest::new(energy, slices, for_slices * band.pfa, band.pd)
+                    });
+                    Arc::new(Tests { dwell, burst })
+                };
                 shared.entry((bins, band_index)).or_insert_with(make).clone()
             })
             .collect();
@@ -57,7 +93,7 @@ impl Decision {
             .collect();
         Decision {
             model: FloorModel::new(&plan.floor, &layout.references, &cell_looks),
-            tables,
+            tests,
             protection_levels_db,
             reference_looks: cell_looks.iter().sum(),
         }
@@ -65,7 +101,7 @@ impl Decision {
 
     /// Equivalent looks of a channel, by its place in the layout.
     pub fn looks(&self, channel: usize) -> f64 {
-        self.tables[channel].energy().looks()
+        self.tests[channel].dwell.energy().looks()
     }
 
     /// Looks of all reference cells together: the most that a floor estimate can rest on.
@@ -76,49 +112,77 @@ impl Decision {
     /// Threshold (ratio to the floor) and required SNR (linear) of a channel, by its place in the
     /// layout, for a floor of the given looks.
     pub fn threshold(&self, channel: usize, floor_looks: f64) -> (f64, f64) {
-        self.tables[channel].at(floor_looks)
+        self.tests[channel].dwell.at(floor_looks)
     }
 
-    /// The verdicts of one dwell, appended to `verdicts`.
-    ///
-    /// `spectrum` is the dwell's averaged power per bin by rising frequency; `scratch` is reused
-    /// from dwell to dwell.
+    /// The verdicts of one dwell, appended to `verdicts`. `memory` is the segment's; `scratch` is
+    /// reused from dwell to dwell.
     pub fn decide(
         &self,
         layout: &Layout,
-        spectrum: &[f32],
-        integrity: Integrity,
+        evidence: Evidence<'_>,
+        memory: &mut FloorMemory,
         scratch: &mut Scratch,
         verdicts: &mut Vec<Verdict>,
     ) {
+        let mut reasons = evidence.reasons;
+        let fitted = self.fit(layout, evidence.spectrum, scratch, &mut reasons);
+        let Scratch { energies, fit, spare, floors, factors } = scratch;
+        floors.clear();
+        floors.extend(layout.channels.iter().map(|channel| {
+            let (position, own) = (channel.position, channel.own_reference);
+            fitted.then(|| self.model.at(fit, energies, position, own, spare)).flatten()
+        }));
+        factors.clear();
+        if fitted {
+            slice_factors(&self.model, fit, evidence.slices, factors);
+        }
+        if reasons.is_empty() {
+            memory.observe(floors, evidence.observed_ns);
+        }
+        for (index, channel) in layout.channels.iter().enumerate() {
+            let own = channel.own_reference;
+            let mut reasons = reasons;
+            if fitted && floors[index].is_none() {
+                reasons.insert(Reason::NoReference);
+            }
+            let unaccepted = floors[index].map_or(0.0, |floor| memory.unaccepted(index, floor));
+            let slices = evidence.slices.chunks_exact(self.model.cell_count());
+            let burst = match (&self.tests[index].burst, floors[index]) {
+                (Some(test), Some(floor)) => {
+                    test.finds(floor, factors, slices.map(|cells| f64::from(cells[own])))
+                }
+                _ => false,
+            };
+            let found = Found { power: energies[own], floor: floors[index], burst, unaccepted };
+            verdicts.push(self.verdict(index, channel, found, reasons));
+        }
+    }
+
+    /// Fits the floor; what stands in the way is added to `reasons`.
+    fn fit(
+        &self,
+        layout: &Layout,
+        spectrum: &[f32],
+        scratch: &mut Scratch,
+        reasons: &mut Reasons,
+    ) -> bool {
         let Scratch { energies, fit, .. } = scratch;
         energies.clear();
         energies.extend(layout.references.iter().map(|cell| cell.span.mean_power(spectrum)));
-        let mut reasons = integrity.reasons;
         if energies.iter().any(|energy| !energy.is_finite()) {
             reasons.insert(Reason::NotFinite);
         } else if energies.iter().any(|energy| *energy <= 0.0) {
             reasons.insert(Reason::NoNoise);
         }
-        let measurable = !reasons.contains(Reason::NotFinite) && !reasons.contains(Reason::NoNoise);
-        let fitted = measurable && self.model.fit(energies, fit);
-        if measurable && !fitted {
+        if reasons.contains(Reason::NotFinite) || reasons.contains(Reason::NoNoise) {
+            return false;
+        }
+        let fitted = self.model.fit(energies, fit);
+        if !fitted {
             reasons.insert(Reason::NoReference);
         }
-        for (index, channel) in layout.channels.iter().enumerate() {
-            let floor = if fitted {
-                let Scratch { energies, fit, spare } = scratch;
-                self.model.at(fit, energies, channel.position, channel.own_reference, spare)
-            } else {
-                None
-            };
-            let mut reasons = reasons;
-            if fitted && floor.is_none() {
-                reasons.insert(Reason::NoReference);
-            }
-            let power = scratch.energies[channel.own_reference];
-            verdicts.push(self.verdict(index, channel, power, floor, reasons));
-        }
+        fitted
     }
 
     /// One channel's verdict; `reasons` are those that stand against any claim.
@@ -126,35 +190,52 @@ impl Decision {
         &self,
         index: usize,
         channel: &ChannelSpan,
-        power: f64,
-        floor: Option<FloorAt>,
+        found: Found,
         mut reasons: Reasons,
     ) -> Verdict {
         let channel_index = channel.channel_index;
-        let Some(floor) = floor else {
+        let Some(floor) = found.floor else {
             assert!(!reasons.is_empty(), "no floor has a reason");
             return Verdict { channel_index, state: State::Unknown, reasons, levels: None };
         };
-        let (threshold, snr) = self.tables[index].at(floor.looks);
+        let (threshold, snr) = self.tests[index].dwell.at(floor.looks);
         let floor_db = decibels(floor.mean * channel.bandwidth_bins);
         let levels = Levels {
-            power_db: decibels(power * channel.bandwidth_bins),
+            power_db: decibels(found.power * channel.bandwidth_bins),
             floor_db,
             threshold_db: floor_db + decibels(threshold),
             sensitivity_db: floor_db + decibels(snr),
         };
+        let protection_level_db = self.protection_levels_db[index];
         let state = if !reasons.is_empty() {
             State::Unknown
-        } else if power > threshold * floor.mean {
+        } else if found.power > threshold * floor.mean {
             State::Occupied
-        } else if levels.sensitivity_db > self.protection_levels_db[index] {
-            reasons.insert(Reason::Insensitive);
-            State::Unknown
+        } else if found.burst {
+            reasons.insert(Reason::Burst);
+            State::Occupied
         } else {
-            State::Idle
+            if levels.sensitivity_db > protection_level_db {
+                reasons.insert(Reason::Insensitive);
+            }
+            if decibels(found.unaccepted * channel.bandwidth_bins) > protection_level_db {
+                reasons.insert(Reason::FloorRaised);
+            }
+            if reasons.is_empty() { State::Idle } else { State::Unknown }
         };
         Verdict { channel_index, state, reasons, levels: Some(levels) }
     }
+}
+
+/// What a dwell found in one channel.
+struct Found {
+    /// Mean power per bin.
+    power: f64,
+    floor: Option<FloorAt>,
+    /// Whether a slice stands out.
+    burst: bool,
+    /// The part of the floor that is not accepted as noise (mean power per bin).
+    unaccepted: f64,
 }
 
 /// Buffers of [`Decision::decide`], kept from dwell to dwell.
@@ -163,6 +244,8 @@ pub struct Scratch {
     energies: Vec<f64>,
     fit: FloorFit,
     spare: FloorFit,
+    floors: Vec<Option<FloorAt>>,
+    factors: Vec<f64>,
 }
 
 /// A power ratio in decibels.

@@ -282,6 +282,24 @@ impl FloorModel {
         self.evaluate(fit, position, &information, &score)
     }
 
+    /// How many reference cells there are.
+    pub fn cell_count(&self) -> usize {
+        self.cells.len()
+    }
+
+    /// The cells that a fit kept: its floor there (mean power per bin), the cell's looks, and the
+    /// cell's value among `values`.
+    pub fn kept_cells<'a>(
+        &'a self,
+        fit: &'a FloorFit,
+        values: &'a [f32],
+    ) -> impl Iterator<Item = (f64, f64, f32)> + 'a {
+        let cells = self.cells.iter().zip(&fit.kept).zip(values);
+        cells.filter(|((_, kept), _)| **kept).map(|((cell, _), value)| {
+            (dot(&fit.coefficients, &cell.basis, self.terms).exp(), cell.looks, *value)
+        })
+    }
+
     /// The floor at a position after one Newton step along `score`.
     fn evaluate(
         &self,

@@ -10,10 +10,12 @@
 
 pub mod availability;
 pub mod block;
+pub mod burst;
 pub mod decision;
 pub mod detector;
 pub mod floor;
 pub mod layout;
+pub mod memory;
 pub mod plan;
 pub mod segment;
 pub mod spectrum;

@@ -6,14 +6,15 @@
 use num_complex::Complex32;
 
 use super::block::SampleBlock;
-use super::decision::{Decision, Integrity, Scratch};
+use super::decision::{Decision, Evidence, Scratch};
 use super::layout::Layout;
+use super::memory::FloorMemory;
 use super::plan::Plan;
 use super::spectrum::{Spectrum, to_rising_frequency};
 use super::statistics::weights::Weights;
 use super::time::{Stamp, samples_to_nanos};
 use super::timing::Timing;
-use super::verdict::{DwellReport, Reason};
+use super::verdict::{DwellReport, Reason, Reasons};
 
 /// A dwell with a larger share of samples at the converter's limits supports no claim: clipping
 /// spreads a strong signal over the whole block. At 12 dB of headroom noise reaches the limits in
@@ -31,6 +32,7 @@ pub struct SegmentDetector {
     /// Decisions by number of slices, made when first needed; index 0 stays empty.
     decisions: Vec<Option<Box<Decision>>>,
     scratch: Scratch,
+    memory: FloorMemory,
     /// Samples that the next transform needs.
     pending: Vec<Complex32>,
     /// When sample 0 since the last gap was taken.
@@ -53,8 +55,8 @@ struct DwellInProgress {
     slice_spectrum: Vec<f32>,
     /// Sum of the slices' means.
     power: Vec<f64>,
-    /// Energy per slice and channel (dB).
-    slice_power_db: Vec<f32>,
+    /// Mean power per bin of every reference cell, slice after slice.
+    slice_cells: Vec<f32>,
 }
 
 impl DwellInProgress {
@@ -65,7 +67,7 @@ impl DwellInProgress {
         self.silent = false;
         self.slice_power.fill(0.0);
         self.power.fill(0.0);
-        self.slice_power_db.clear();
+        self.slice_cells.clear();
     }
 }
 
@@ -89,6 +91,7 @@ impl SegmentDetector {
             plan: plan.clone(),
             decisions: vec![None; timing.slices + 1],
             scratch: Scratch::default(),
+            memory: FloorMemory::default(),
             pending: Vec::new(),
             anchor: Stamp { utc: super::time::Utc(0), monotonic_ns: 0 },
             dwell_start: 0,
@@ -115,10 +118,10 @@ impl SegmentDetector {
 
     /// The decision for a dwell of `slices` slices.
     pub fn decision(&mut self, slices: usize) -> &Decision {
-        let transforms = slices * self.timing.transforms_per_slice;
+        let transforms = self.timing.transforms_per_slice;
         let (plan, layout, weights) = (&self.plan, &self.layout, &mut self.weights);
-        self.decisions[slices]
-            .get_or_insert_with(|| Box::new(Decision::new(plan, layout, weights, transforms)))
+        let make = || Box::new(Decision::new(plan, layout, weights, transforms, slices));
+        self.decisions[slices].get_or_insert_with(make)
     }
 
     /// Takes in a block and hands every dwell that it completes to `sink`. A gap ends the dwell in
@@ -169,10 +172,9 @@ impl SegmentDetector {
         for (sum, power) in dwell.power.iter_mut().zip(&dwell.slice_spectrum) {
             *sum += f64::from(*power);
         }
-        for channel in &self.layout.channels {
-            let power = channel.span.mean_power(&dwell.slice_spectrum) * channel.bandwidth_bins;
-            dwell.slice_power_db.push(10.0 * power.log10() as f32);
-        }
+        let cells = self.layout.references.iter();
+        let spectrum = &dwell.slice_spectrum;
+        dwell.slice_cells.extend(cells.map(|cell| cell.span.mean_power(spectrum) as f32));
         dwell.slice_power.fill(0.0);
         dwell.transforms_in_slice = 0;
         dwell.slices += 1;
@@ -183,29 +185,41 @@ impl SegmentDetector {
         let samples = slices * self.timing.slice_samples();
         let spectrum: Vec<f32> =
             self.dwell.power.iter().map(|power| (power / slices as f64) as f32).collect();
-        let mut integrity = Integrity::default();
+        let mut reasons = Reasons::NONE;
         if self.dwell.clipped as f64 > CLIPPED_SHARE_MAX * samples as f64 {
-            integrity.reasons.insert(Reason::Overload);
+            reasons.insert(Reason::Overload);
         }
         if self.dwell.silent {
-            integrity.reasons.insert(Reason::NoNoise);
+            reasons.insert(Reason::NoNoise);
         }
+        let nanos = |samples| samples_to_nanos(samples, self.sample_rate_hz);
+        let begun = self.dwell_start;
+        self.dwell_start += samples as u64;
+        let observed_ns = nanos(self.dwell_start) - nanos(begun);
+        let start = self.anchor.plus_nanos(nanos(begun));
+        let slice_power_db = self.slice_power_db();
         let mut verdicts = Vec::with_capacity(self.layout.channels.len());
         self.decision(slices);
         let decision = self.decisions[slices].as_ref().expect("made just now");
-        decision.decide(&self.layout, &spectrum, integrity, &mut self.scratch, &mut verdicts);
-        let begun = self.dwell_start;
-        self.dwell_start += samples as u64;
-        let nanos = |samples| samples_to_nanos(samples, self.sample_rate_hz);
-        let report = DwellReport {
-            sequence: 0,
-            start: self.anchor.plus_nanos(nanos(begun)),
-            observed_ns: nanos(self.dwell_start) - nanos(begun),
-            verdicts,
-            slice_power_db: self.dwell.slice_power_db.clone(),
-            spectrum,
-        };
+        let evidence =
+            Evidence { spectrum: &spectrum, slices: &self.dwell.slice_cells, reasons, observed_ns };
+        let (memory, scratch) = (&mut self.memory, &mut self.scratch);
+        decision.decide(&self.layout, evidence, memory, scratch, &mut verdicts);
         self.dwell.reset();
-        report
+        DwellReport { sequence: 0, start, observed_ns, verdicts, slice_power_db, spectrum }
+    }
+
+    /// Power in each channel's bandwidth, slice after slice (dB).
+    fn slice_power_db(&self) -> Vec<f32> {
+        let slices = self.dwell.slice_cells.chunks_exact(self.layout.references.len());
+        let channels = &self.layout.channels;
+        slices
+            .flat_map(|cells| {
+                channels.iter().map(|channel| {
+                    let power = f64::from(cells[channel.own_reference]) * channel.bandwidth_bins;
+                    10.0 * power.log10() as f32
+                })
+            })
+            .collect()
     }
 }

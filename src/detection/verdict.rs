@@ -42,11 +42,16 @@ pub enum Reason {
     NoNoise = 5,
     /// Nobody looked: down time, a gap in the samples, a missed visit.
     NotObserved = 6,
+    /// Found in a slice: a transmission too short to show in the whole dwell.
+    Burst = 7,
+    /// The floor has risen, and what it rose by could be an incumbent at the protection level that
+    /// fills the whole block.
+    FloorRaised = 8,
 }
 
 impl Reason {
     /// Every reason, in the order of its code.
-    pub const ALL: [Reason; 7] = [
+    pub const ALL: [Reason; 9] = [
         Reason::Own,
         Reason::Insensitive,
         Reason::Overload,
@@ -54,6 +59,8 @@ impl Reason {
         Reason::NoReference,
         Reason::NoNoise,
         Reason::NotObserved,
+        Reason::Burst,
+        Reason::FloorRaised,
     ];
 
     /// The code used in every interface.
@@ -66,6 +73,8 @@ impl Reason {
             Reason::NoReference => "no_reference",
             Reason::NoNoise => "no_noise",
             Reason::NotObserved => "not_observed",
+            Reason::Burst => "burst",
+            Reason::FloorRaised => "floor_raised",
         }
     }
 }
@@ -140,7 +149,7 @@ pub struct Verdict {
     pub channel_index: usize,
     /// The verdict. For an own stretch it is `Unknown` with reason `Own`.
     pub state: State,
-    /// Why; empty for a plain `Occupied` or `Idle`.
+    /// Why; empty for a plain `Occupied` and for `Idle`.
     pub reasons: Reasons,
     /// What was measured; `None` where it could not be.
     pub levels: Option<Levels>,
