@@ -162,6 +162,12 @@ const REASONS = {
     "The input carried no noise at all: the receiver was not listening."],
   not_observed: ["not observed", () =>
     "Nobody looked: the node was down, samples were lost, or a visit was missed."],
+  burst: ["short burst", () =>
+    "A transmission too short to show in the whole dwell stood out in one of its slices."],
+  floor_raised: ["noise floor has risen", () =>
+    "The noise has risen, and an incumbent that fills the whole block could hide in it."],
+  impulses: ["impulses", () =>
+    "Impulses that fill the whole block, such as ignition sparks, hit most of this measurement."],
   stale: ["verdict too old", (band) =>
     `The newest verdict is older than the policy allows${policy(band, "max_age_s")}.`],
   protected: ["protected", () =>

@@ -6,9 +6,12 @@ use clap::Args;
 
 use super::derived::{BandNumbers, Derived, TRANSMISSIONS_PER_HOUR};
 use super::{Failure, print};
-use crate::config::quantity::{format_duration, format_frequency, format_sample_rate};
+use crate::config::quantity::{
+    format_duration, format_frequency, format_sample_rate, format_share,
+};
 use crate::config::{Configuration, Source};
 use crate::daemon::{DATABASE_NAME, open_source};
+use crate::detection::burst::BURST_SHARE;
 use crate::detection::time::Utc;
 
 #[derive(Args)]
@@ -150,6 +153,11 @@ fn levels_in_words(band: &BandNumbers, level_ref: &str, line: &mut impl FnMut(&s
         return;
     };
     line("threshold", format!("{threshold_db:.2} dB over the floor, for Pfa {:e}", band.pfa));
+    if let Some(burst_db) = band.burst_threshold_over_floor_db {
+        let share = format_share(BURST_SHARE);
+        let text = format!("{burst_db:.1} dB over the floor in one slice, for {share} of the Pfa");
+        line("short bursts", text);
+    }
     let side = if sensitivity_db < 0.0 { "below" } else { "over" };
     line(
         "sensitivity",

@@ -57,6 +57,9 @@ pub(super) struct BandNumbers {
     pub(super) threshold_over_floor_db: Option<f64>,
     /// Signal alone over the floor (dB).
     pub(super) sensitivity_over_floor_db: Option<f64>,
+    /// Over the floor: where a single slice decides, on its share of the false-alarm probability
+    /// (dB); `None` for dwells of a single slice.
+    pub(super) burst_threshold_over_floor_db: Option<f64>,
     pub(super) protection_level_db: f64,
     /// The highest floor in a channel at which the protection level is still detected (dB).
     pub(super) floor_max_db: Option<f64>,
@@ -114,7 +117,11 @@ fn band_numbers(
         .filter(in_band)
         .max_by(|a, b| sensitivity_db(*a).total_cmp(&sensitivity_db(*b)))?;
     let timing = segment.timing();
-    let looks = segment.decision(timing.slices).looks(place);
+    let decision = segment.decision(timing.slices);
+    let looks = decision.looks(place);
+    let all_others = decision.reference_looks() - looks;
+    let burst_threshold =
+        (all_others > 0.0).then(|| decision.burst_threshold(place, all_others)).flatten();
     let over_floor_db = |level: fn(Levels) -> f64| idle[place].map(|l| level(l) - l.floor_db);
     let sensitivity_over_floor_db = over_floor_db(|levels| levels.sensitivity_db);
     let rate_hz = plan.receiver.sample_rate_hz;
@@ -138,6 +145,7 @@ fn band_numbers(
         pfa: band.pfa,
         pd: band.pd,
         threshold_over_floor_db: over_floor_db(|levels| levels.threshold_db),
+        burst_threshold_over_floor_db: burst_threshold.map(|ratio| 10.0 * ratio.log10()),
         sensitivity_over_floor_db,
         protection_level_db: band.protection_level_db,
         floor_max_db: sensitivity_over_floor_db.map(|db| band.protection_level_db - db),

@@ -48,16 +48,21 @@ impl BurstTest {
         BurstTest { table: RatioTable::new(slice_energy, pfa / slices, pd), slices }
     }
 
-    /// Whether any slice stands out. `energies` are the channel's by slice, `factors` the slices'.
+    /// Threshold of a slice over its own floor, where the dwell's floor has the given looks.
     ///
     /// A slice's own factor rests on a slice's share of the looks behind the dwell's floor.
+    pub(super) fn threshold(&self, floor_looks: f64) -> f64 {
+        self.table.at(floor_looks / self.slices).0
+    }
+
+    /// Whether any slice stands out. `energies` are the channel's by slice, `factors` the slices'.
     pub(super) fn finds(
         &self,
         floor: FloorAt,
         factors: &[f64],
         energies: impl Iterator<Item = f64>,
     ) -> bool {
-        let (threshold, _) = self.table.at(floor.looks / self.slices);
+        let threshold = self.threshold(floor.looks);
         let stands_out = |(energy, factor): (f64, &f64)| energy > threshold * floor.mean * factor;
         energies.zip(factors).any(stands_out)
     }

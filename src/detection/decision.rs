@@ -8,6 +8,7 @@ use super::floor::{FloorAt, FloorFit, FloorModel};
 use super::layout::{ChannelSpan, Layout};
 use super::memory::FloorMemory;
 use super::plan::Plan;
+use super::slices::SliceView;
 use super::statistics::ratio::RatioTable;
 use super::statistics::weights::Weights;
 use super::verdict::{Levels, Reason, Reasons, State, Verdict};
@@ -32,6 +33,18 @@ struct Tests {
     dwell: RatioTable,
     /// `None` for a dwell of a single slice.
     burst: Option<BurstTest>,
+}
+
+impl Tests {
+    /// Threshold (ratio to the floor) and required SNR (linear) for a floor of the given looks,
+    /// where only a share of the dwell's slices is left.
+    ///
+    /// The table is of whole dwells. The looks that the channel lost are charged to the floor
+    /// instead, so that the variance of the ratio is right; only its skewness is a little off.
+    fn at(&self, looks_floor: f64, share: f64) -> (f64, f64) {
+        let lost = (1.0 / share - 1.0) / self.dwell.energy().looks();
+        self.dwell.at(1.0 / (1.0 / looks_floor + lost))
+    }
 }
 
 /// Everything about a decision that does not depend on the samples: the floor model and, per
@@ -115,6 +128,12 @@ impl Decision {
         self.tests[channel].dwell.at(floor_looks)
     }
 
+    /// Threshold (ratio to the floor) at which a single slice of a channel decides, by its place in
+    /// the layout, for a floor of the given looks; `None` for a dwell of a single slice.
+    pub fn burst_threshold(&self, channel: usize, floor_looks: f64) -> Option<f64> {
+        self.tests[channel].burst.as_ref().map(|test| test.threshold(floor_looks))
+    }
+
     /// The verdicts of one dwell, appended to `verdicts`. `memory` is the segment's; `scratch` is
     /// reused from dwell to dwell.
     pub fn decide(
@@ -126,16 +145,29 @@ impl Decision {
         verdicts: &mut Vec<Verdict>,
     ) {
         let mut reasons = evidence.reasons;
-        let fitted = self.fit(layout, evidence.spectrum, scratch, &mut reasons);
-        let Scratch { energies, fit, spare, floors, factors } = scratch;
+        let energies = &mut scratch.energies;
+        energies.clear();
+        let cells = layout.references.iter();
+        energies.extend(cells.map(|cell| cell.span.mean_power(evidence.spectrum)));
+        let finite = energies.iter().all(|energy| energy.is_finite());
+        let share = if finite { self.level_slices(evidence.slices, scratch) } else { 1.0 };
+        // With half or less left, what is left may be no better than what was dropped.
+        if share <= 0.5 {
+            reasons.insert(Reason::Impulses);
+        }
+        let fitted = share > 0.5 && self.fit(scratch, &mut reasons);
+        let Scratch { energies, fit, spare, floors, factors, view, .. } = scratch;
         floors.clear();
         floors.extend(layout.channels.iter().map(|channel| {
             let (position, own) = (channel.position, channel.own_reference);
-            fitted.then(|| self.model.at(fit, energies, position, own, spare)).flatten()
+            let floor = fitted.then(|| self.model.at(fit, energies, position, own, spare))?;
+            floor.map(|floor| FloorAt { looks: share * floor.looks, ..floor })
         }));
         factors.clear();
         if fitted {
             slice_factors(&self.model, fit, evidence.slices, factors);
+            let hit = factors.iter_mut().zip(&view.clean).filter(|(_, clean)| !**clean);
+            hit.for_each(|(factor, _)| *factor = f64::INFINITY);
         }
         if reasons.is_empty() {
             memory.observe(floors, evidence.observed_ns);
@@ -143,7 +175,7 @@ impl Decision {
         for (index, channel) in layout.channels.iter().enumerate() {
             let own = channel.own_reference;
             let mut reasons = reasons;
-            if fitted && floors[index].is_none() {
+            if floors[index].is_none() && reasons.is_empty() {
                 reasons.insert(Reason::NoReference);
             }
             let unaccepted = floors[index].map_or(0.0, |floor| memory.unaccepted(index, floor));
@@ -154,22 +186,40 @@ impl Decision {
                 }
                 _ => false,
             };
-            let found = Found { power: energies[own], floor: floors[index], burst, unaccepted };
+            let found =
+                Found { power: energies[own], floor: floors[index], burst, unaccepted, share };
             verdicts.push(self.verdict(index, channel, found, reasons));
         }
     }
 
-    /// Fits the floor; what stands in the way is added to `reasons`.
-    fn fit(
-        &self,
-        layout: &Layout,
-        spectrum: &[f32],
-        scratch: &mut Scratch,
-        reasons: &mut Reasons,
-    ) -> bool {
+    /// Looks at the slices and, where they are not alike, makes the energies anew from the clean
+    /// ones. Returns the share of slices that the energies come from.
+    ///
+    /// The cells to go by are those that a fit to the usual energies keeps: impulses do not reach
+    /// it.
+    fn level_slices(&self, slices: &[f32], scratch: &mut Scratch) -> f64 {
+        let Scratch { energies, fit, view, kept, .. } = scratch;
+        let count = slices.len() / energies.len();
+        if !view.find_usual(slices, energies.len()) || !self.model.fit(&view.usual, fit) {
+            return 1.0;
+        }
+        kept.clear();
+        let looks = self.model.kept_looks(fit);
+        kept.extend(looks.map(|looks| looks.map(|looks| looks / count as f64)));
+        view.examine(slices, kept);
+        if view.calm {
+            return 1.0;
+        }
+        let clean = view.clean_count();
+        if clean > 0 {
+            view.levelled(slices, energies);
+        }
+        clean as f64 / count as f64
+    }
+
+    /// Fits the floor to the energies; what stands in the way is added to `reasons`.
+    fn fit(&self, scratch: &mut Scratch, reasons: &mut Reasons) -> bool {
         let Scratch { energies, fit, .. } = scratch;
-        energies.clear();
-        energies.extend(layout.references.iter().map(|cell| cell.span.mean_power(spectrum)));
         if energies.iter().any(|energy| !energy.is_finite()) {
             reasons.insert(Reason::NotFinite);
         } else if energies.iter().any(|energy| *energy <= 0.0) {
@@ -198,7 +248,7 @@ impl Decision {
             assert!(!reasons.is_empty(), "no floor has a reason");
             return Verdict { channel_index, state: State::Unknown, reasons, levels: None };
         };
-        let (threshold, snr) = self.tests[index].dwell.at(floor.looks);
+        let (threshold, snr) = self.tests[index].at(floor.looks, found.share);
         let floor_db = decibels(floor.mean * channel.bandwidth_bins);
         let levels = Levels {
             power_db: decibels(found.power * channel.bandwidth_bins),
@@ -236,6 +286,8 @@ struct Found {
     burst: bool,
     /// The part of the floor that is not accepted as noise (mean power per bin).
     unaccepted: f64,
+    /// Share of the dwell's slices that the power and the floor come from.
+    share: f64,
 }
 
 /// Buffers of [`Decision::decide`], kept from dwell to dwell.
@@ -246,6 +298,8 @@ pub struct Scratch {
     spare: FloorFit,
     floors: Vec<Option<FloorAt>>,
     factors: Vec<f64>,
+    view: SliceView,
+    kept: Vec<Option<f64>>,
 }
 
 /// A power ratio in decibels.

@@ -300,6 +300,11 @@ impl FloorModel {
         })
     }
 
+    /// The looks of each cell that a fit kept, `None` for the others.
+    pub fn kept_looks<'a>(&'a self, fit: &'a FloorFit) -> impl Iterator<Item = Option<f64>> + 'a {
+        self.cells.iter().zip(&fit.kept).map(|(cell, kept)| kept.then_some(cell.looks))
+    }
+
     /// The floor at a position after one Newton step along `score`.
     fn evaluate(
         &self,

@@ -18,6 +18,7 @@ pub mod layout;
 pub mod memory;
 pub mod plan;
 pub mod segment;
+mod slices;
 pub mod spectrum;
 pub mod standing;
 pub mod statistics;

@@ -47,11 +47,13 @@ pub enum Reason {
     /// The floor has risen, and what it rose by could be an incumbent at the protection level that
     /// fills the whole block.
     FloorRaised = 8,
+    /// Impulses that fill the whole block hit half of the slices or more.
+    Impulses = 9,
 }
 
 impl Reason {
     /// Every reason, in the order of its code.
-    pub const ALL: [Reason; 9] = [
+    pub const ALL: [Reason; 10] = [
         Reason::Own,
         Reason::Insensitive,
         Reason::Overload,
@@ -61,6 +63,7 @@ impl Reason {
         Reason::NotObserved,
         Reason::Burst,
         Reason::FloorRaised,
+        Reason::Impulses,
     ];
 
     /// The code used in every interface.
@@ -75,6 +78,7 @@ impl Reason {
             Reason::NotObserved => "not_observed",
             Reason::Burst => "burst",
             Reason::FloorRaised => "floor_raised",
+            Reason::Impulses => "impulses",
         }
     }
 }
