@@ -239,7 +239,7 @@ impl FloorModel {
             };
             let mut largest = 0.0_f64;
             for (coefficient, step) in fit.coefficients.iter_mut().zip(step) {
-                // A step from far away can overshoot; half a unit is 2 dB.
+                // A step from far away can overshoot; two units are 8.7 dB.
                 *coefficient += step.clamp(-2.0, 2.0);
                 largest = largest.max(step.abs());
             }
