@@ -144,6 +144,8 @@ impl Task {
     fn commit(&mut self) {
         let changed = self.keeper.recorded_until_us() > self.recorded_until_us;
         if !changed && self.keeper.pending().next().is_none() {
+            // Reports may still have come, all of them from before the record's end.
+            self.health.update(false, |health| count(health, &self.keeper));
             return;
         }
         let limit = self.file_bytes_max.load(Ordering::Relaxed);

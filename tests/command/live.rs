@@ -202,7 +202,7 @@ fn lost_samples_are_a_problem_of_the_node_while_they_are_fresh() {
     ]);
     folder.record("site", "ci16_le", &noise(48_000.0, 30.0), 48_000.0, captures);
     let node = folder.start();
-    let lost = |health: &Value| health["problems"].to_string().contains("Samples were lost");
+    let lost = |health: &Value| health["problems"].to_string().contains("a gap in the samples");
     let health = node.wait_for("the loss", "/v1/health", lost);
     assert_eq!(health["status"], "impaired");
     assert!(health["capture"]["gaps"].as_u64().expect("told") >= 1, "{health}");
