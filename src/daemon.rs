@@ -29,9 +29,11 @@ use crate::config::{self, ConfigError, Configuration};
 use crate::detection::detector::Detector;
 use crate::detection::plan::Plan;
 use crate::detection::standing::Standing;
-use crate::detection::time::Utc;
+use crate::detection::time::{Stamp, Utc};
 use crate::detection::verdict::DwellReport;
-use crate::history::{HealthView, History, HistoryError, HistoryState, Identity, Options, Writer};
+use crate::history::{
+    HealthView, History, HistoryError, HistoryState, Identity, Options, Reader, Writer,
+};
 use crate::scene::{Scene, SceneSpec};
 
 /// Time that a block of samples covers, about [s]: short against a dwell, long against a wake-up.
@@ -153,18 +155,19 @@ impl Daemon {
         }
         let plan = Arc::new(plan);
         let History { writer, reader, health } = open_history(configuration, &plan)?;
+        let standing = recall(&plan, &reader, clock.now()).map_err(StartError::History)?;
         let source = Box::new(Paced::new(source, Arc::clone(&clock)));
         let pacing = source.counters();
         let samples = block_samples(plan.receiver.sample_rate_hz);
         let (blocks, capture) = queue::spawn(source, samples, QUEUE_BLOCKS, WhenFull::Drop)
             .map_err(|error| StartError::Thread("capture", error.to_string()))?;
-        let standing = Standing::new(&plan);
-        let (publish, live) = watch::channel(Arc::new(Live { standing, newest: None }));
+        let recalled = Live { standing: standing.clone(), newest: None };
+        let (publish, live) = watch::channel(Arc::new(recalled));
         let progress = Arc::new(Progress::default());
         let detection = {
             let (plan, progress) = (Arc::clone(&plan), Arc::clone(&progress));
             let (clock, status) = (Arc::clone(&clock), capture.status());
-            let task = Detection { plan, publish, writer, progress, clock };
+            let task = Detection { plan, standing, publish, writer, progress, clock };
             std::thread::Builder::new()
                 .name("detection".to_owned())
                 .spawn(move || task.run(blocks, &status))
@@ -258,6 +261,19 @@ fn open_history(configuration: &Configuration, plan: &Plan) -> Result<History, S
     History::open(path, &identity, plan, options).map_err(StartError::History)
 }
 
+/// Where every channel stands before the first dwell: the hold-off outlives a restart.
+fn recall(plan: &Plan, reader: &Reader, now: Stamp) -> Result<Standing, HistoryError> {
+    let channels: Vec<(f64, f64)> =
+        plan.channels.iter().map(|channel| (channel.centre_hz, channel.bandwidth_hz)).collect();
+    let mut standing = Standing::new(plan);
+    for (index, detected) in reader.last_detections(&channels)?.into_iter().enumerate() {
+        if let Some(detected) = detected {
+            standing.recall(index, detected, now);
+        }
+    }
+    Ok(standing)
+}
+
 fn longest_max_age_s(plan: &Plan) -> f64 {
     plan.bands.iter().map(|band| band.policy.max_age_ns as f64 * 1e-9).fold(0.0, f64::max)
 }
@@ -265,6 +281,7 @@ fn longest_max_age_s(plan: &Plan) -> f64 {
 /// What the detection thread owns.
 struct Detection {
     plan: Arc<Plan>,
+    standing: Standing,
     publish: watch::Sender<Arc<Live>>,
     writer: Writer,
     progress: Arc<Progress>,
@@ -272,9 +289,9 @@ struct Detection {
 }
 
 impl Detection {
-    fn run(self, mut blocks: Blocks, status: &CaptureStatus) -> Writer {
-        let mut detector = Detector::new(&self.plan);
-        let mut standing = Standing::new(&self.plan);
+    fn run(mut self, mut blocks: Blocks, status: &CaptureStatus) -> Writer {
+        let plan = Arc::clone(&self.plan);
+        let mut detector = Detector::new(&plan);
         let mut first = true;
         loop {
             match blocks.next(POLL) {
@@ -284,13 +301,13 @@ impl Detection {
                     if block.gap_before && !std::mem::take(&mut first) {
                         self.progress.loss_at(block.start.monotonic_ns);
                     }
-                    detector.push(block, |report| self.publish(report, &mut standing));
+                    detector.push(block, |report| self.publish(report));
                 }
                 Next::Nothing => {}
                 Next::Ended => break,
             }
         }
-        detector.finish(|report| self.publish(report, &mut standing));
+        detector.finish(|report| self.publish(report));
         match status.state() {
             CaptureState::Failed(message) => tracing::error!("capture failed: {message}"),
             _ => tracing::info!("capture has ended: every channel is unknown from here on"),
@@ -298,11 +315,11 @@ impl Detection {
         self.writer
     }
 
-    fn publish(&self, report: DwellReport, standing: &mut Standing) {
-        standing.observe(&report);
+    fn publish(&mut self, report: DwellReport) {
+        self.standing.observe(&report);
         self.progress.dwell_at(report.end().monotonic_ns);
         let report = Arc::new(report);
-        let live = Live { standing: standing.clone(), newest: Some(Arc::clone(&report)) };
+        let live = Live { standing: self.standing.clone(), newest: Some(Arc::clone(&report)) };
         // Nobody listening is no fault: the receiver end lives in the state that is served.
         self.publish.send_replace(Arc::new(live));
         // A full queue is counted by the writer and told by its health.
