@@ -238,7 +238,7 @@ impl Daemon {
 /// How a daemon has stopped.
 #[derive(Clone, Debug, PartialEq, Eq)]
 pub enum Stopped {
-    /// Everything that was observed is on the record.
+    /// Everything that was decided is on the record, but for what the health counts as dropped.
     Well,
     /// The last commit failed, for the reason given.
     HistoryLost(String),

@@ -7,6 +7,8 @@
 mod detections;
 #[path = "history/faults.rs"]
 mod faults;
+#[path = "history/health.rs"]
+mod health;
 #[path = "history/keeper.rs"]
 mod keeper;
 #[path = "history/support.rs"]

@@ -131,11 +131,17 @@ impl HealthView {
 
     /// Changes the health after a try to commit; `committed` restarts its age, and a count that has
     /// risen restarts that count's.
-    pub(super) fn update(&self, committed: bool, change: impl FnOnce(&mut HistoryHealth)) {
+    ///
+    /// `change` must not log or wait for anything else: whoever asks for the health would wait too.
+    pub(super) fn update<T>(
+        &self,
+        committed: bool,
+        change: impl FnOnce(&mut HistoryHealth) -> T,
+    ) -> T {
         let mut guard = self.lock();
         let (health, moments) = &mut *guard;
         let before = (health.dropped_runs, health.clipped_reports);
-        change(health);
+        let outcome = change(health);
         let now = Some(Instant::now());
         if committed {
             moments.committed = now;
@@ -146,6 +152,7 @@ impl HealthView {
         if health.clipped_reports > before.1 {
             moments.clipped = now;
         }
+        outcome
     }
 
     /// The health; it stays readable when a thread died with the lock, since each change is whole.

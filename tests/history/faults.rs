@@ -349,20 +349,6 @@ fn a_full_queue_refuses_counts_and_leaves_the_time_unknown() {
     }
 }
 
-#[test]
-fn reports_that_are_left_out_are_told_even_when_there_is_nothing_to_commit() {
-    let folder = tempfile::tempdir().unwrap();
-    let history = open(&folder.path().join("history.sqlite3"), 1).unwrap();
-    history.writer.offer(same(0, 10_000, 1, RunState::Idle));
-    wait_until("a commit", || history.health.now().commits == 1);
-    assert_eq!(history.health.now().last_clip_age, None);
-    // UTC has gone back: the whole report repeats time that is on the record.
-    history.writer.offer(same(5_000, 1_000, 1, RunState::Occupied));
-    wait_until("the count", || history.health.now().clipped_reports == 1);
-    assert!(history.health.now().last_clip_age.is_some());
-    assert_eq!(history.health.now().commits, 1);
-}
-
 /// A disk that is really full, of a file system of its own. Needs root and leave to mount, so it is
 /// run by hand: `cargo nextest run --release --run-ignored only really_full`.
 #[test]
