@@ -5,8 +5,8 @@
 //! queue costs the newest block or report, which is counted and becomes `unknown`.
 
 use std::path::{Path, PathBuf};
+use std::sync::Arc;
 use std::sync::atomic::{AtomicI64, AtomicU64, Ordering};
-use std::sync::{Arc, Mutex, PoisonError};
 use std::thread::JoinHandle;
 use std::time::Duration;
 
@@ -18,7 +18,7 @@ use crate::answers::{
     HistoryHealth as ServedHistory, HistoryState as ServedHistoryState, Live, NodeInfo,
 };
 use crate::capture::clock::{Clock, SystemClock};
-use crate::capture::paced::Paced;
+use crate::capture::paced::{Paced, PacedCounters};
 use crate::capture::queue::{
     self, Blocks, CaptureHandle, CaptureState, CaptureStatus, Next, WhenFull,
 };
@@ -29,9 +29,11 @@ use crate::config::{self, ConfigError, Configuration};
 use crate::detection::detector::Detector;
 use crate::detection::plan::Plan;
 use crate::detection::standing::Standing;
-use crate::detection::time::Utc;
+use crate::detection::time::{Stamp, Utc};
 use crate::detection::verdict::DwellReport;
-use crate::history::{HealthView, History, HistoryError, HistoryState, Identity, Options, Writer};
+use crate::history::{
+    HealthView, History, HistoryError, HistoryState, Identity, Options, Reader, Writer,
+};
 use crate::scene::{Scene, SceneSpec};
 
 /// Time that a block of samples covers, about [s]: short against a dwell, long against a wake-up.
@@ -42,6 +44,9 @@ pub const QUEUE_BLOCKS: usize = 25;
 
 /// How long the detection thread waits for a block before it looks whether it is to stop.
 const POLL: Duration = Duration::from_millis(100);
+
+/// History is late when its newest commit is older than the commit interval by this (s).
+const COMMIT_LATE_S: f64 = 60.0;
 
 /// Name of the database in the data directory.
 pub const DATABASE_NAME: &str = "history.sqlite3";
@@ -126,8 +131,8 @@ fn second_of_week(moment: Utc) -> f64 {
 /// A running node.
 pub struct Daemon {
     capture: CaptureHandle,
-    detection: JoinHandle<()>,
-    writer: Arc<Mutex<Option<Writer>>>,
+    /// Gives the writer back at its end. If it panics, the writer is closed on the way out.
+    detection: JoinHandle<Writer>,
     state: AppState,
 }
 
@@ -150,25 +155,32 @@ impl Daemon {
         }
         let plan = Arc::new(plan);
         let History { writer, reader, health } = open_history(configuration, &plan)?;
+        let standing = recall(&plan, &reader, clock.now()).map_err(StartError::History)?;
         let source = Box::new(Paced::new(source, Arc::clone(&clock)));
+        let pacing = source.counters();
         let samples = block_samples(plan.receiver.sample_rate_hz);
         let (blocks, capture) = queue::spawn(source, samples, QUEUE_BLOCKS, WhenFull::Drop)
             .map_err(|error| StartError::Thread("capture", error.to_string()))?;
-        let standing = Standing::new(&plan);
-        let (publish, live) = watch::channel(Arc::new(Live { standing, newest: None }));
+        let recalled = Live { standing: standing.clone(), newest: None };
+        let (publish, live) = watch::channel(Arc::new(recalled));
         let progress = Arc::new(Progress::default());
-        let writer = Arc::new(Mutex::new(Some(writer)));
         let detection = {
             let (plan, progress) = (Arc::clone(&plan), Arc::clone(&progress));
-            let (writer, status) = (Arc::clone(&writer), capture.status());
-            let task = Detection { plan, publish, writer, progress, clock: Arc::clone(&clock) };
+            let (clock, status) = (Arc::clone(&clock), capture.status());
+            let task = Detection { plan, standing, publish, writer, progress, clock };
             std::thread::Builder::new()
                 .name("detection".to_owned())
                 .spawn(move || task.run(blocks, &status))
                 .map_err(|error| StartError::Thread("detection", error.to_string()))?
         };
-        let watched = Watched { capture: capture.status(), progress, history: health };
-        let late_after_s = longest_max_age_s(&plan);
+        let watched = Watched {
+            capture: capture.status(),
+            pacing,
+            progress,
+            history: health,
+            dwell_late_after_s: longest_max_age_s(&plan),
+            commit_late_after_s: configuration.commit_interval.as_secs_f64() + COMMIT_LATE_S,
+        };
         let health_clock = Arc::clone(&clock);
         let state = AppState {
             node: Arc::new(NodeInfo {
@@ -182,11 +194,11 @@ impl Daemon {
             }),
             plan,
             live,
-            health: Arc::new(move || watched.health(&*health_clock, late_after_s)),
+            health: Arc::new(move || watched.health(&*health_clock)),
             reader: Some(reader),
             clock: Arc::new(move || clock.now()),
         };
-        Ok(Daemon { capture, detection, writer, state })
+        Ok(Daemon { capture, detection, state })
     }
 
     /// What the answers are made from.
@@ -211,16 +223,14 @@ impl Daemon {
         if let CaptureState::Failed(message) = self.capture.join() {
             tracing::error!("capture had failed: {message}");
         }
-        let panicked = self.detection.join().is_err();
-        let writer = self.writer.lock().unwrap_or_else(PoisonError::into_inner).take();
-        let history = writer.map(Writer::close);
-        match history.filter(|health| health.state == HistoryState::Stopped) {
-            Some(health) => {
-                let why = health.message.unwrap_or_default();
+        let Ok(writer) = self.detection.join() else { return Stopped::Panicked };
+        let history = writer.close();
+        match history.state {
+            HistoryState::Writing => Stopped::Well,
+            HistoryState::Stopped => {
+                let why = history.message.unwrap_or_default();
                 Stopped::HistoryLost(format!("the end of the history is not written: {why}"))
             }
-            None if panicked => Stopped::Panicked,
-            None => Stopped::Well,
         }
     }
 }
@@ -228,7 +238,7 @@ impl Daemon {
 /// How a daemon has stopped.
 #[derive(Clone, Debug, PartialEq, Eq)]
 pub enum Stopped {
-    /// Everything that was observed is on the record.
+    /// Everything that was decided is on the record, but for what the health counts as dropped.
     Well,
     /// The last commit failed, for the reason given.
     HistoryLost(String),
@@ -251,6 +261,19 @@ fn open_history(configuration: &Configuration, plan: &Plan) -> Result<History, S
     History::open(path, &identity, plan, options).map_err(StartError::History)
 }
 
+/// Where every channel stands before the first dwell: the hold-off outlives a restart.
+fn recall(plan: &Plan, reader: &Reader, now: Stamp) -> Result<Standing, HistoryError> {
+    let channels: Vec<(f64, f64)> =
+        plan.channels.iter().map(|channel| (channel.centre_hz, channel.bandwidth_hz)).collect();
+    let mut standing = Standing::new(plan);
+    for (index, detected) in reader.last_detections(&channels)?.into_iter().enumerate() {
+        if let Some(detected) = detected {
+            standing.recall(index, detected, now);
+        }
+    }
+    Ok(standing)
+}
+
 fn longest_max_age_s(plan: &Plan) -> f64 {
     plan.bands.iter().map(|band| band.policy.max_age_ns as f64 * 1e-9).fold(0.0, f64::max)
 }
@@ -258,16 +281,17 @@ fn longest_max_age_s(plan: &Plan) -> f64 {
 /// What the detection thread owns.
 struct Detection {
     plan: Arc<Plan>,
+    standing: Standing,
     publish: watch::Sender<Arc<Live>>,
-    writer: Arc<Mutex<Option<Writer>>>,
+    writer: Writer,
     progress: Arc<Progress>,
     clock: Arc<dyn Clock>,
 }
 
 impl Detection {
-    fn run(self, mut blocks: Blocks, status: &CaptureStatus) {
-        let mut detector = Detector::new(&self.plan);
-        let mut standing = Standing::new(&self.plan);
+    fn run(mut self, mut blocks: Blocks, status: &CaptureStatus) -> Writer {
+        let plan = Arc::clone(&self.plan);
+        let mut detector = Detector::new(&plan);
         let mut first = true;
         loop {
             match blocks.next(POLL) {
@@ -277,31 +301,29 @@ impl Detection {
                     if block.gap_before && !std::mem::take(&mut first) {
                         self.progress.loss_at(block.start.monotonic_ns);
                     }
-                    detector.push(block, |report| self.publish(report, &mut standing));
+                    detector.push(block, |report| self.publish(report));
                 }
                 Next::Nothing => {}
                 Next::Ended => break,
             }
         }
-        detector.finish(|report| self.publish(report, &mut standing));
+        detector.finish(|report| self.publish(report));
         match status.state() {
             CaptureState::Failed(message) => tracing::error!("capture failed: {message}"),
             _ => tracing::info!("capture has ended: every channel is unknown from here on"),
         }
+        self.writer
     }
 
-    fn publish(&self, report: DwellReport, standing: &mut Standing) {
-        standing.observe(&report);
+    fn publish(&mut self, report: DwellReport) {
+        self.standing.observe(&report);
         self.progress.dwell_at(report.end().monotonic_ns);
         let report = Arc::new(report);
-        let live = Live { standing: standing.clone(), newest: Some(Arc::clone(&report)) };
+        let live = Live { standing: self.standing.clone(), newest: Some(Arc::clone(&report)) };
         // Nobody listening is no fault: the receiver end lives in the state that is served.
         self.publish.send_replace(Arc::new(live));
-        let writer = self.writer.lock().unwrap_or_else(PoisonError::into_inner);
-        if let Some(writer) = writer.as_ref() {
-            // A full queue is counted by the writer and told by its health.
-            writer.offer(report);
-        }
+        // A full queue is counted by the writer and told by its health.
+        self.writer.offer(report);
     }
 }
 
@@ -332,17 +354,21 @@ impl Progress {
 /// Everything that the health is read from.
 struct Watched {
     capture: CaptureStatus,
+    pacing: Arc<PacedCounters>,
     progress: Arc<Progress>,
     history: HealthView,
+    dwell_late_after_s: f64,
+    commit_late_after_s: f64,
 }
 
 impl Watched {
-    fn health(&self, clock: &dyn Clock, late_after_s: f64) -> Health {
+    fn health(&self, clock: &dyn Clock) -> Health {
         let now_ns = clock.now().monotonic_ns;
         let age_s = |moment: &AtomicI64| {
             let moment_ns = moment.load(Ordering::Relaxed);
             (moment_ns > 0).then(|| (now_ns - moment_ns).max(0) as f64 * 1e-9)
         };
+        let seconds = |age: Option<Duration>| age.map(|age| age.as_secs_f64());
         let counts = self.capture.counts();
         let history = self.history.now();
         Health {
@@ -356,13 +382,15 @@ impl Watched {
                 lost_samples: counts.samples_dropped,
                 gaps: counts.gaps,
                 blocks_dropped: counts.blocks_dropped,
+                late: self.pacing.late(),
+                clock_steps: self.pacing.clock_steps(),
                 last_sample_age_s: age_s(&self.progress.last_sample_ns),
                 last_loss_age_s: age_s(&self.progress.last_loss_ns),
             },
             detection: DetectionHealth {
                 dwells: self.progress.dwells.load(Ordering::Relaxed),
                 last_dwell_age_s: age_s(&self.progress.last_dwell_ns),
-                late_after_s,
+                late_after_s: self.dwell_late_after_s,
             },
             history: ServedHistory {
                 state: match history.state {
@@ -370,8 +398,14 @@ impl Watched {
                     HistoryState::Stopped => ServedHistoryState::Stopped,
                 },
                 path_name: DATABASE_NAME.to_owned(),
-                last_commit_age_s: history.last_commit_age.map(|age| age.as_secs_f64()),
+                last_commit_age_s: seconds(history.last_commit_age),
+                late_after_s: self.commit_late_after_s,
                 failed_commits: history.failed_commits,
+                dropped_reports: history.dropped_reports,
+                dropped_runs: history.dropped_runs,
+                last_drop_age_s: seconds(history.last_drop_age),
+                clipped_reports: history.clipped_reports,
+                last_clip_age_s: seconds(history.last_clip_age),
                 bytes: history.file_bytes,
             },
         }

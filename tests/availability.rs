@@ -175,3 +175,24 @@ fn a_gap_between_dwells_begins_the_check_anew() {
     node.dwell(IDLE);
     assert_eq!(node.refusals(0, 0), [Refusal::CheckTime]);
 }
+
+#[test]
+fn a_recalled_detection_holds_off_by_its_age_and_never_for_less_when_utc_has_gone_back() {
+    // The hold-off is 60 s. Detected so long before (negative: after) the start [s], the channel is
+    // held off for so long after it [s].
+    for (ago_s, held_s) in [(0, 60), (45, 15), (60, 0), (86_400 * 3650, 0), (-1, 60), (-9000, 60)] {
+        let mut node = Node::new();
+        let detected = START.utc.plus_nanos(-ago_s * SECOND_NS);
+        node.standing.recall(0, detected, START);
+        let last = node.standing.channels[0].last_detection.expect("recalled");
+        assert!(last.utc <= START.utc && last.monotonic_ns <= START.monotonic_ns);
+        let held = |elapsed_ns: i64| {
+            let answer = availability(&node.plan, &node.standing, START.plus_nanos(elapsed_ns));
+            let (_, refusals) =
+                answer.refusals.iter().find(|(index, _)| *index == 0).expect("nothing is known");
+            refusals.contains(&Refusal::HoldOff)
+        };
+        assert!(held_s == 0 || held(held_s * SECOND_NS - 1), "{ago_s} s ago");
+        assert!(!held(held_s * SECOND_NS), "{ago_s} s ago");
+    }
+}

@@ -3,8 +3,12 @@
 //! The oracle for sums and runs is a grid of painted cells (`support::Line`), which knows neither
 //! intervals nor SQL.
 
+#[path = "history/detections.rs"]
+mod detections;
 #[path = "history/faults.rs"]
 mod faults;
+#[path = "history/health.rs"]
+mod health;
 #[path = "history/keeper.rs"]
 mod keeper;
 #[path = "history/support.rs"]
@@ -15,7 +19,8 @@ use std::path::Path;
 use fallowband::detection::time::Utc;
 use fallowband::detection::verdict::{Reason, Reasons};
 use fallowband::history::{
-    History, HistoryState, Identity, QUARTER_ROW_BYTES, RUN_ROW_BYTES, Reader, RunState,
+    Column, History, HistoryState, Identity, QUARTER_ROW_BYTES, QUARTER_US, RUN_ROW_BYTES, Reader,
+    RunState,
 };
 use rand_core::{Rng, SeedableRng};
 use rand_xoshiro::Xoshiro256PlusPlus;
@@ -142,22 +147,25 @@ fn assert_answers(reader: &Reader, name: &str, line: &Line, (from, to, now): (i6
     assert_eq!(part.truncated, limit < full.runs.len());
 
     let names = [name.to_owned()];
-    let answer = reader.quarters(Some(&names), moment(from), moment(to), moment(now)).unwrap();
-    let mut covered = from;
-    for quarter in &answer[0].quarters {
-        let (start, until) = (cell_of(quarter.start), cell_of(quarter.end));
-        assert_eq!(start, covered, "quarters touch");
-        covered = until;
-        let sums = quarter.sums;
-        assert_eq!(
-            [sums.occupied_us, sums.idle_us, sums.unknown_us, sums.own_us],
-            line.sums_us(start, until),
-            "{name} [{start}, {until})"
-        );
-        assert_eq!(sums.represented_us(), (quarter.end.0 - quarter.start.0) / 1_000);
-        assert!(sums.observed_us <= sums.represented_us());
+    for step_us in [60_000_000, 300_000_000, QUARTER_US, 4 * QUARTER_US] {
+        let answer =
+            reader.columns(Some(&names), moment(from), moment(to), moment(now), step_us).unwrap();
+        let mut covered = from;
+        for Column { start, end: until, sums } in &answer[0].columns {
+            assert_eq!(cell_of(*start), covered, "columns touch");
+            covered = cell_of(*until);
+            let step_of = |us: i64| us.div_euclid(step_us);
+            assert_eq!(step_of(start.0 / 1_000), step_of(until.0 / 1_000 - 1), "one step each");
+            assert_eq!(
+                [sums.occupied_us, sums.idle_us, sums.unknown_us, sums.own_us],
+                line.sums_us(cell_of(*start), covered),
+                "{name} [{start:?}, {until:?})"
+            );
+            assert_eq!(sums.represented_us(), until.nanos_since(*start) / 1_000);
+            assert!(sums.observed_us <= sums.represented_us());
+        }
+        assert_eq!(covered, end);
     }
-    assert_eq!(covered, end);
 }
 
 #[test]
@@ -335,7 +343,8 @@ fn a_clock_that_jumps_by_years_writes_a_handful_of_rows() {
         connection.query_row("SELECT count(*) FROM quarter", [], |row| row.get(0)).unwrap();
     assert_eq!(rows, 2);
     assert_sound(&path);
-    let refused = history.reader.quarters(None, at(-years_ms * 2), at(years_ms), at(years_ms));
+    let refused =
+        history.reader.columns(None, at(-years_ms * 2), at(years_ms), at(years_ms), QUARTER_US);
     assert!(refused.is_ok(), "one channel over eighty years is allowed: {refused:?}");
 }
 
@@ -347,10 +356,12 @@ fn a_question_that_would_exhaust_memory_is_refused_in_one_line() {
     history.writer.offer(same(0, 1_000, 500, RunState::Idle));
     history.writer.close();
     let year_ms = 365 * 86_400_000;
-    let error = history.reader.quarters(None, at(0), at(year_ms), at(year_ms)).unwrap_err();
+    let error =
+        history.reader.columns(None, at(0), at(year_ms), at(year_ms), QUARTER_US).unwrap_err();
     assert!(!error.to_string().contains('\n'));
     assert!(error.to_string().contains("shorter range"), "{error}");
-    let day = history.reader.quarters(None, at(0), at(86_400_000), at(86_400_000)).unwrap();
+    let day =
+        history.reader.columns(None, at(0), at(86_400_000), at(86_400_000), QUARTER_US).unwrap();
     assert_eq!(day.len(), 500);
 }
 

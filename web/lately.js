@@ -12,8 +12,7 @@ import {
 const MINUTE_MS = 60 * 1000;
 const HOUR_MS = 60 * MINUTE_MS;
 const TEN = 10;
-// Unknown up to this share, or up to this time [s], is left unmarked: a lost dwell or two.
-const SOME_UNKNOWN = 0.02;
+// Unknown up to this time [s] in a stretch is left unmarked: a lost dwell or two.
 const SOME_UNKNOWN_S = 0.5;
 // For a picture of this length [ms], a mark on the time axis every so often [ms].
 const TICKS = [[15, 3], [60, 10], [180, 30], [360, 60], [720, 120], [1440, 180]]
@@ -196,8 +195,7 @@ function strokes(record, layout) {
 function texture(cell) {
   if (cell.unknown_share > 0.5 || cell.elapsed_s <= 0) return "chart-unknown";
   if (cell.own_share > 0.5) return "chart-own";
-  const marked = cell.unknown_share > SOME_UNKNOWN && cell.unknown_s > SOME_UNKNOWN_S;
-  return marked ? "chart-partly" : null;
+  return cell.unknown_s > SOME_UNKNOWN_S ? "chart-partly" : null;
 }
 
 function box(left, top, right, bottom) {

@@ -73,7 +73,6 @@ export class DayRecord {
     this.quarters = new Columns(QUARTER_MS);
     this.sheet = null;
     this.asked = null;
-    this.nextMs = null;
     /** Whether the newest answer reached the end of the record. */
     this.complete = false;
   }
@@ -86,18 +85,14 @@ export class DayRecord {
    */
   path(committedMs, startedMs) {
     const dayMs = floor(committedMs, QUARTER_MS) + QUARTER_MS - DAY_MS;
-    this.asked = { columns: this.quarters, newestMs: null, committedMs, startedMs };
-    if (this.quarters.newestMs === null) return path(dayMs, committedMs);
+    this.asked = { columns: this.quarters, committedMs, startedMs };
+    if (this.quarters.newestMs === null) return path(dayMs, committedMs, QUARTER_MS);
     this.layOut(committedMs, startedMs);
-    const { columns, fromMs, beginMs, stepMs } = this.sheet;
-    if (columns === this.quarters) {
-      return path(Math.max(dayMs, columns.newestMs - QUARTER_MS), committedMs);
-    }
-    // The node answers by quarter hours and cuts them to the range: one question, one fine column.
-    const newestMs = floor(committedMs - 1, stepMs);
-    this.asked = { ...this.asked, columns, newestMs };
-    this.nextMs = Math.max(fromMs, Math.min(this.nextMs ?? fromMs, newestMs));
-    return path(Math.max(beginMs, this.nextMs), Math.min(committedMs, this.nextMs + stepMs));
+    const { columns, beginMs, stepMs } = this.sheet;
+    this.asked.columns = columns;
+    // The last whole column is asked for once more: its end may have been written late.
+    const knownMs = columns.newestMs ?? -Infinity;
+    return path(Math.max(beginMs, knownMs - stepMs), committedMs, stepMs);
   }
 
   /** Chooses what the record is laid out on: the first sheet that still has room for it. */
@@ -116,7 +111,6 @@ export class DayRecord {
       beginMs: young ? beginMs : fromMs,
       columns: fine ? new Columns(stepMs) : this.quarters,
     };
-    this.nextMs = null;
   }
 
   /** Where the record begins: with the node, unless something older is on record. */
@@ -133,18 +127,14 @@ export class DayRecord {
   /** Takes in the answer to the newest question; one from before a `clear` is left out. */
   take(answer) {
     if (this.asked === null) return;
-    const { columns, newestMs, committedMs, startedMs } = this.asked;
+    const { columns, committedMs, startedMs } = this.asked;
     columns.take(answer);
     if (columns === this.quarters) {
       columns.drop(columns.newestMs + QUARTER_MS - DAY_MS);
       // The first answer says how old the record is. A young one is then asked for more finely.
       this.layOut(committedMs, startedMs);
-      this.complete = this.sheet.columns === columns;
-      return;
     }
-    this.complete = this.nextMs >= newestMs;
-    // The last whole column is asked for once more: its end may have been written late.
-    this.nextMs += this.complete ? -columns.stepMs : columns.stepMs;
+    this.complete = this.sheet.columns === columns;
   }
 
   /** What there is to show; null before the first answer. */
@@ -185,10 +175,10 @@ export function addUp(totals) {
     NOTHING));
 }
 
-function path(fromMs, toMs) {
+function path(fromMs, toMs, stepMs) {
   if (fromMs >= toMs) return null;
   const range = [fromMs, toMs].map((ms) => new Date(ms).toISOString());
-  return `v1/occupancy?resolution=15m&from=${range[0]}&to=${range[1]}`;
+  return `v1/occupancy?resolution=${stepMs / MINUTE_MS}m&from=${range[0]}&to=${range[1]}`;
 }
 
 function floor(ms, stepMs) {

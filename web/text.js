@@ -260,7 +260,9 @@ export function captureWords(capture = {}) {
   return `${state}. ${whole(capture.samples)} samples taken. ${age} `
     + `${sentenceCase(counted(capture.lost_samples, "sample", "samples"))} lost, `
     + `${counted(capture.gaps, "gap", "gaps")}, `
-    + `${counted(capture.blocks_dropped, "block", "blocks")} dropped for want of time.`;
+    + `${counted(capture.blocks_dropped, "block", "blocks")} dropped for want of time, `
+    + `${counted(capture.late, "late delivery", "late deliveries")} given up, `
+    + `${counted(capture.clock_steps, "step", "steps")} of the clock.`;
 }
 
 /** Detection in words. */
@@ -278,7 +280,10 @@ export function historyWords(history = {}) {
   const age = isNumber(history.last_commit_age_s)
     ? `Last commit ${duration(history.last_commit_age_s)} ago.` : "Nothing is committed yet.";
   return `${state}${name}. ${age} `
-    + `${sentenceCase(counted(history.failed_commits, "commit", "commits"))} failed.`;
+    + `${sentenceCase(counted(history.failed_commits, "commit", "commits"))} failed, `
+    + `${counted(history.dropped_reports, "report", "reports")} and `
+    + `${counted(history.dropped_runs, "run", "runs")} dropped, `
+    + `${counted(history.clipped_reports, "report", "reports")} from before the end of the record.`;
 }
 
 /** The node in words: what it listens to, with what, since when. */

@@ -11,12 +11,8 @@ use super::figures;
 /// so this is far beyond any jitter. Our own choice.
 const SILENT_AFTER_S: f64 = 5.0;
 
-/// A loss of samples stays a problem for this long (s). Our own choice.
+/// A loss, of samples or of history, stays a problem for this long (s). Our own choice.
 const LOSS_REMEMBERED_S: f64 = 60.0;
-
-/// History is late when nothing was committed for this long (s). Our own choice: many times the
-/// interval at which the writer commits.
-const COMMIT_LATE_AFTER_S: f64 = 60.0;
 
 /// What capture is doing.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize)]
@@ -43,10 +39,14 @@ pub struct CaptureHealth {
     pub gaps: u64,
     /// Blocks dropped since the start because detection was behind.
     pub blocks_dropped: u64,
+    /// How often since the start samples were given up because their delivery had fallen behind.
+    pub late: u64,
+    /// How often since the start UTC had parted from the monotonic clock, and stamps began anew.
+    pub clock_steps: u64,
     /// Time since the newest sample (s); `None` before the first.
     #[serde(serialize_with = "as_seconds")]
     pub last_sample_age_s: Option<f64>,
-    /// Time since samples or blocks were last lost (s); `None` if never. Not served as a figure.
+    /// Time since the last gap, of whatever kind (s); `None` if never. Not served as a figure.
     #[serde(skip)]
     pub last_loss_age_s: Option<f64>,
 }
@@ -84,8 +84,23 @@ pub struct HistoryHealth {
     /// Time since the newest commit (s); `None` before the first.
     #[serde(serialize_with = "as_seconds")]
     pub last_commit_age_s: Option<f64>,
+    /// Age from which the newest commit is late (s). Not served.
+    #[serde(skip)]
+    pub late_after_s: f64,
     /// Commits that failed since the start.
     pub failed_commits: u64,
+    /// Reports since the start that the writer had no room for; their time is unknown.
+    pub dropped_reports: u64,
+    /// Runs since the start that waited in too great a number; their time is unknown.
+    pub dropped_runs: u64,
+    /// Time since one of both was last dropped (s); `None` if never. Not served as a figure.
+    #[serde(skip)]
+    pub last_drop_age_s: Option<f64>,
+    /// Reports since the start that UTC put before the record's end; that part was left out.
+    pub clipped_reports: u64,
+    /// Time since the last of them (s); `None` if never. Not served as a figure.
+    #[serde(skip)]
+    pub last_clip_age_s: Option<f64>,
     /// Size of the file (bytes).
     pub bytes: u64,
 }
@@ -104,10 +119,31 @@ pub struct Health {
 impl Health {
     /// What is wrong at present, one plain sentence each; empty when the node is well.
     pub fn problems(&self) -> Vec<String> {
-        [self.capture.problem(), self.capture.loss(), self.late_dwells(), self.history.problem()]
-            .into_iter()
-            .flatten()
-            .collect()
+        [
+            self.capture.problem(),
+            self.capture.loss(),
+            self.late_dwells(),
+            self.history.stopped().or_else(|| self.late_history()),
+            self.history.drops(),
+            self.history.clips(),
+        ]
+        .into_iter()
+        .flatten()
+        .collect()
+    }
+
+    /// Commits that stay away although there is something to commit: no dwell since the newest one,
+    /// or only dwells before the record's end, leave nothing to do.
+    fn late_history(&self) -> Option<String> {
+        let age_s = self.history.last_commit_age_s?;
+        let waiting_s = age_s - self.detection.last_dwell_age_s.unwrap_or(age_s);
+        let late = reached(waiting_s, self.history.late_after_s) && self.history.clips().is_none();
+        late.then(|| {
+            format!(
+                "History was last committed {age_s:.0} s ago (failed commits since the start: {}).",
+                self.history.failed_commits
+            )
+        })
     }
 
     /// Dwells that stay away although samples arrive; without samples, capture has said enough.
@@ -146,35 +182,43 @@ impl CaptureHealth {
     }
 
     fn loss(&self) -> Option<String> {
-        let age_s = self.last_loss_age_s.filter(|age_s| *age_s < LOSS_REMEMBERED_S)?;
+        let age_s = fresh(self.last_loss_age_s)?;
         Some(format!(
-            "Samples were lost {age_s:.0} s ago (since the start: lost samples {}, gaps {}, \
-             dropped blocks {}).",
-            self.lost_samples, self.gaps, self.blocks_dropped
+            "There was a gap in the samples {age_s:.0} s ago (since the start: lost samples {}, \
+             gaps {}, dropped blocks {}, late {}, clock steps {}).",
+            self.lost_samples, self.gaps, self.blocks_dropped, self.late, self.clock_steps
         ))
     }
 }
 
 impl HistoryHealth {
-    fn problem(&self) -> Option<String> {
-        match (self.state, self.last_commit_age_s) {
-            (HistoryState::Stopped, _) => {
-                Some("History is not being written; answers about now still hold.".to_string())
-            }
-            (HistoryState::Writing, Some(age_s)) if reached(age_s, COMMIT_LATE_AFTER_S) => {
-                Some(format!(
-                    "History was last committed {age_s:.0} s ago (failed commits since the \
-                     start: {}).",
-                    self.failed_commits
-                ))
-            }
-            (HistoryState::Writing, None) if self.failed_commits > 0 => Some(format!(
-                "History has not been committed yet (failed commits: {}).",
-                self.failed_commits
-            )),
-            (HistoryState::Writing, _) => None,
-        }
+    fn stopped(&self) -> Option<String> {
+        (self.state == HistoryState::Stopped)
+            .then(|| "History is not being written; answers about now still hold.".to_string())
     }
+
+    fn drops(&self) -> Option<String> {
+        let age_s = fresh(self.last_drop_age_s)?;
+        Some(format!(
+            "History could not keep up {age_s:.0} s ago, and some of it is unknown (since the \
+             start: dropped reports {}, dropped runs {}).",
+            self.dropped_reports, self.dropped_runs
+        ))
+    }
+
+    fn clips(&self) -> Option<String> {
+        let age_s = fresh(self.last_clip_age_s)?;
+        Some(format!(
+            "The clock was behind the end of the history {age_s:.0} s ago, and what it repeated \
+             was left out (reports since the start: {}).",
+            self.clipped_reports
+        ))
+    }
+}
+
+/// The age of a loss (s) that is still a problem.
+fn fresh(age_s: Option<f64>) -> Option<f64> {
+    age_s.filter(|age_s| *age_s < LOSS_REMEMBERED_S)
 }
 
 /// Whether an age has reached a limit (s); an age that is no number has, since nothing is known.
@@ -202,6 +246,8 @@ mod tests {
                 lost_samples: 0,
                 gaps: 0,
                 blocks_dropped: 0,
+                late: 0,
+                clock_steps: 0,
                 last_sample_age_s: Some(0.02),
                 last_loss_age_s: None,
             },
@@ -214,7 +260,13 @@ mod tests {
                 state: HistoryState::Writing,
                 path_name: "history.sqlite3".to_string(),
                 last_commit_age_s: Some(2.0),
+                late_after_s: 70.0,
                 failed_commits: 0,
+                dropped_reports: 0,
+                dropped_runs: 0,
+                last_drop_age_s: None,
+                clipped_reports: 0,
+                last_clip_age_s: None,
                 bytes: 4096,
             },
         }
@@ -235,8 +287,29 @@ mod tests {
         health.capture.last_loss_age_s = Some(12.0);
         assert_eq!(
             health.problems(),
-            ["Samples were lost 12 s ago (since the start: lost samples 4800, gaps 1, dropped \
-              blocks 0)."]
+            ["There was a gap in the samples 12 s ago (since the start: lost samples 4800, gaps \
+              1, dropped blocks 0, late 0, clock steps 0)."]
+        );
+    }
+
+    #[test]
+    fn history_that_is_lost_or_left_out_is_a_problem_while_it_is_fresh() {
+        let mut health = well();
+        (health.history.dropped_reports, health.history.dropped_runs) = (3, 5);
+        health.history.clipped_reports = 7;
+        assert_eq!(health.problems(), Vec::<String>::new());
+        health.history.last_drop_age_s = Some(4.0);
+        health.history.last_clip_age_s = Some(9.0);
+        // While reports are left out there may be nothing to commit.
+        health.history.last_commit_age_s = Some(700.0);
+        assert_eq!(
+            health.problems(),
+            [
+                "History could not keep up 4 s ago, and some of it is unknown (since the start: \
+                 dropped reports 3, dropped runs 5).",
+                "The clock was behind the end of the history 9 s ago, and what it repeated was \
+                 left out (reports since the start: 7).",
+            ]
         );
     }
 
@@ -246,6 +319,8 @@ mod tests {
         health.capture.state = CaptureState::Ended;
         health.capture.last_sample_age_s = Some(90.0);
         health.detection.last_dwell_age_s = Some(90.0);
+        // Nothing has come to commit since.
+        health.history.last_commit_age_s = Some(85.0);
         assert_eq!(
             health.problems(),
             ["Capture has ended: no more samples arrive and every channel turns unknown."]
@@ -266,6 +341,7 @@ mod tests {
             ]
         );
         health.capture.last_sample_age_s = Some(7.0);
+        health.detection.last_dwell_age_s = Some(0.1);
         health.history.state = HistoryState::Writing;
         health.history.last_commit_age_s = Some(75.0);
         health.history.failed_commits = 3;

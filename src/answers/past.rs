@@ -1,4 +1,4 @@
-//! Answers about the past: occupancy by quarter of an hour, and runs.
+//! Answers about the past: occupancy by steps of time, and runs.
 //!
 //! The history is read on threads that may block, a few questions at a time. Time without a record
 //! is unknown, and the four sums always add up to the elapsed time.
@@ -15,21 +15,35 @@ use super::problem::Problem;
 use super::query::{Parameters, channel_index};
 use crate::detection::time::{NANOS_PER_SECOND, Utc};
 use crate::detection::verdict::Reason;
-use crate::history::{ChannelQuarters, QUARTER_US, QuarterRow, Reader, RunList, RunRow, Sums};
+use crate::history::{ChannelColumns, Column, Reader, RunList, RunRow, Sums};
 
-/// Longest range of one question about occupancy (days).
-const OCCUPANCY_DAYS_MAX: i64 = 31;
+/// A step by which occupancy can be told.
+struct Step {
+    /// As it is asked for.
+    word: &'static str,
+    /// Length (s).
+    length_s: i64,
+    /// Longest range of one question (days): short steps are summed from runs, which takes longer.
+    days_max: i64,
+}
 
-/// Quarters of an hour times channels that one answer may hold: a week of 500 channels is 336,000.
-/// An answer takes some hundred bytes of memory for each while it is made.
+const STEPS: [Step; 4] = [
+    Step { word: "1m", length_s: 60, days_max: 1 },
+    Step { word: "5m", length_s: 300, days_max: 7 },
+    Step { word: "15m", length_s: 900, days_max: 31 },
+    Step { word: "1h", length_s: 3600, days_max: 31 },
+];
+
+/// The step when nothing else is asked for.
+const STEP_DEFAULT: &str = "15m";
+
+/// Steps times channels that one answer may hold: a week of 500 channels by quarters of an hour is
+/// 336,000. An answer takes some hundred bytes of memory for each while it is made.
 const CELLS_MAX: i64 = 400_000;
 
 /// Runs in an answer when nothing else is asked for, and at most.
 const RUNS_DEFAULT: usize = 1000;
 const RUNS_MAX: usize = 10_000;
-
-/// Length of a quarter of an hour (ns).
-const QUARTER_NS: i64 = QUARTER_US * 1000;
 
 /// Questions to the history that are worked on at once; further ones wait their turn, within the
 /// time that a request may take. It bounds memory, and leaves the node's cores to the detector.
@@ -40,6 +54,16 @@ static QUESTIONS: Semaphore = Semaphore::const_new(2);
 struct Range {
     from: Utc,
     to: Utc,
+}
+
+impl Step {
+    fn read(parameters: &Parameters) -> Result<&'static Step, Problem> {
+        let word = parameters.one("resolution")?.unwrap_or(STEP_DEFAULT);
+        STEPS.iter().find(|step| step.word == word).ok_or_else(|| {
+            let words = STEPS.map(|step| step.word);
+            Problem::bad_value("resolution", word, &words.join(", "))
+        })
+    }
 }
 
 impl Range {
@@ -62,16 +86,18 @@ impl Range {
         self.to.nanos_since(self.from)
     }
 
-    /// Refuses a range that is too long for so many channels.
-    fn bounded(self, channels: usize) -> Result<Range, Problem> {
-        let quarters_max = CELLS_MAX / channels.max(1) as i64;
-        let longest_ns = (quarters_max * QUARTER_NS).min(OCCUPANCY_DAYS_MAX * NANOS_PER_DAY);
+    /// Refuses a range that is too long for so many channels by such steps.
+    fn bounded(self, channels: usize, step: &Step) -> Result<Range, Problem> {
+        let steps_max = CELLS_MAX / channels.max(1) as i64;
+        let longest_ns =
+            (steps_max * step.length_s * NANOS_PER_SECOND).min(step.days_max * NANOS_PER_DAY);
         if self.length_ns() <= longest_ns {
             return Ok(self);
         }
         let allowed = format!(
-            "at most {} days at once for {channels} channels, so not before {}",
-            longest_ns / NANOS_PER_DAY,
+            "at most {} h at once for {channels} channels by {}, so not before {}",
+            longest_ns / (3600 * NANOS_PER_SECOND),
+            step.word,
             moment(self.to.plus_nanos(-longest_ns)),
         );
         Err(Problem::bad_value("from", &moment(self.from), &allowed))
@@ -84,9 +110,7 @@ pub(super) async fn occupancy(
     uri: Uri,
 ) -> Result<Response, Problem> {
     let parameters = Parameters::read(&uri, &["from", "to", "channel", "resolution"])?;
-    if let Some(given) = parameters.one("resolution")?.filter(|given| *given != "15m") {
-        return Err(Problem::bad_value("resolution", given, "15m"));
-    }
+    let step = Step::read(&parameters)?;
     let plan = &state.plan;
     let mut names: Vec<String> = Vec::new();
     for id in parameters.all("channel") {
@@ -99,12 +123,12 @@ pub(super) async fn occupancy(
         names = plan.channels.iter().map(|channel| channel.id.clone()).collect();
     }
     let now = (state.clock)().utc;
-    let range = Range::read(&parameters, now)?.bounded(names.len())?;
+    let range = Range::read(&parameters, now)?.bounded(names.len(), step)?;
     ask(&state, move |reader| {
         let channels = reader
-            .quarters(Some(&names), range.from, range.to, now)
+            .columns(Some(&names), range.from, range.to, now, step.length_s * 1_000_000)
             .map_err(|error| error.to_string())?;
-        occupancy_answer(range, &channels)
+        occupancy_answer(range, step, &channels)
     })
     .await
 }
@@ -197,14 +221,18 @@ struct Total {
 
 /// # Errors
 /// If the sums do not add up: then the record is damaged, and no figure made of it is given out.
-fn occupancy_answer(range: Range, channels: &[ChannelQuarters]) -> Result<OccupancyAnswer, String> {
-    let starts = |channel: &ChannelQuarters| {
-        channel.quarters.iter().map(|quarter| moment(quarter.start)).collect()
+fn occupancy_answer(
+    range: Range,
+    step: &Step,
+    channels: &[ChannelColumns],
+) -> Result<OccupancyAnswer, String> {
+    let starts = |channel: &ChannelColumns| {
+        channel.columns.iter().map(|column| moment(column.start)).collect()
     };
     Ok(OccupancyAnswer {
         from: moment(range.from),
         to: moment(range.to),
-        resolution_s: QUARTER_NS / NANOS_PER_SECOND,
+        resolution_s: step.length_s,
         start: channels.first().map(starts).unwrap_or_default(),
         channels: channels
             .iter()
@@ -213,12 +241,12 @@ fn occupancy_answer(range: Range, channels: &[ChannelQuarters]) -> Result<Occupa
     })
 }
 
-fn channel_occupancy(channel: &ChannelQuarters, range: Range) -> Result<ChannelOccupancy, String> {
+fn channel_occupancy(channel: &ChannelColumns, range: Range) -> Result<ChannelOccupancy, String> {
     let astray =
         |start| format!("channel {}: sums from {} do not add up", channel.channel, moment(start));
     let mut columns = ChannelOccupancy { id: channel.channel.clone(), ..Default::default() };
     let mut total = Sums::default();
-    for QuarterRow { start, end, sums } in &channel.quarters {
+    for Column { start, end, sums } in &channel.columns {
         if sums.represented_us() * 1000 != end.nanos_since(*start) {
             return Err(astray(*start));
         }

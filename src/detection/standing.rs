@@ -4,7 +4,7 @@
 //! stretch nor shorten an idle time.
 
 use super::plan::Plan;
-use super::time::Stamp;
+use super::time::{Stamp, Utc};
 use super::verdict::{DwellReport, State, Verdict};
 
 /// Two dwells follow each other without a gap when the second starts within this of the first's end
@@ -24,12 +24,13 @@ pub struct ChannelStanding {
     pub end: Stamp,
     /// Start of the unbroken run of this state.
     pub since: Stamp,
-    /// End of the last dwell in which the channel was occupied, since the program started.
+    /// End of the last dwell in which the channel was occupied, or of a detection recalled from the
+    /// record.
     pub last_detection: Option<Stamp>,
 }
 
 impl ChannelStanding {
-    const NEVER: Stamp = Stamp { utc: super::time::Utc(0), monotonic_ns: i64::MIN / 2 };
+    const NEVER: Stamp = Stamp { utc: Utc(0), monotonic_ns: i64::MIN / 2 };
 
     fn new() -> ChannelStanding {
         ChannelStanding {
@@ -81,6 +82,19 @@ impl Standing {
     /// The standing before the first dwell.
     pub fn new(plan: &Plan) -> Standing {
         Standing { channels: vec![ChannelStanding::new(); plan.channels.len()] }
+    }
+
+    /// Takes in the end of a channel's last detection on record, as of the present moment `now`.
+    ///
+    /// The monotonic clock of that time is gone, so its age is taken from UTC. A detection that
+    /// ended after `now` tells that UTC has gone back by nobody knows how much: it counts as just
+    /// now, which holds a channel off for too long rather than too short.
+    ///
+    /// # Panics
+    /// If the channel index is outside the plan.
+    pub fn recall(&mut self, channel_index: usize, detected: Utc, now: Stamp) {
+        let age_ns = now.utc.nanos_since(detected).max(0);
+        self.channels[channel_index].last_detection = Some(now.plus_nanos(-age_ns));
     }
 
     /// Takes in a dwell.

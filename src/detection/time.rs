@@ -8,14 +8,15 @@ pub const NANOS_PER_SECOND: i64 = 1_000_000_000;
 pub struct Utc(pub i64);
 
 impl Utc {
-    /// The moment `nanos` later (earlier when negative).
+    /// The moment `nanos` later (earlier when negative), at most the ends of 64 bits: a computer's
+    /// clock may be set to any year, and that is no reason to stop.
     pub fn plus_nanos(self, nanos: i64) -> Utc {
-        Utc(self.0 + nanos)
+        Utc(self.0.saturating_add(nanos))
     }
 
     /// Nanoseconds from `earlier` to `self`; negative when `self` is the earlier one.
     pub fn nanos_since(self, earlier: Utc) -> i64 {
-        self.0 - earlier.0
+        self.0.saturating_sub(earlier.0)
     }
 }
 
@@ -50,6 +51,13 @@ pub fn samples_to_nanos(samples: u64, sample_rate_hz: f64) -> i64 {
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn a_clock_that_stands_at_the_end_of_time_stays_there() {
+        let end = Stamp { utc: Utc(i64::MAX), monotonic_ns: 5 };
+        assert_eq!(end.plus_nanos(1), Stamp { utc: Utc(i64::MAX), monotonic_ns: 6 });
+        assert_eq!(Utc(i64::MIN).nanos_since(Utc(1)), i64::MIN);
+    }
 
     #[test]
     fn sample_counts_become_nanoseconds_without_loss() {

@@ -62,7 +62,7 @@ pub enum HistoryError {
     },
     /// A question with more answers than we are willing to hold in memory.
     TooMuch {
-        /// Quarters times channels that were asked for.
+        /// Columns times channels that were asked for.
         asked: i64,
         /// The most that one question may ask for.
         most: i64,
@@ -149,7 +149,7 @@ impl fmt::Display for HistoryError {
             ),
             HistoryError::TooMuch { asked, most } => write!(
                 f,
-                "history: {asked} quarters of an hour were asked for, at most {most} at once: ask \
+                "history: {asked} columns were asked for, at most {most} at once: ask \
                  for a shorter range or fewer channels"
             ),
             HistoryError::Database { path, detail } => {

@@ -9,6 +9,7 @@
 //! edit what is on the record, or touch a file that is not ours. Time comes in with the reports;
 //! the only clock read here is the monotonic one that says when the next commit is due.
 
+mod columns;
 mod commit;
 mod error;
 mod file;
@@ -22,9 +23,10 @@ use std::time::Duration;
 
 use crate::detection::plan::Plan;
 
+pub use columns::{ChannelColumns, Column};
 pub use error::HistoryError;
 pub use health::{HealthView, HistoryHealth, HistoryState};
-pub use reader::{ChannelQuarters, QuarterRow, Reader, RunList, RunRow};
+pub use reader::{Reader, RunList, RunRow};
 pub use runs::{QUARTER_US, Run, RunKeeper, RunState, Sums, TOLERANCE_US};
 pub use writer::Writer;
 

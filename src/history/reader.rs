@@ -4,24 +4,24 @@
 //! never leave a hole in an answer or fill one with anything but unknown: time without a record,
 //! before, after or between, is unknown and `not_observed`.
 
-use std::collections::HashMap;
 use std::path::{Path, PathBuf};
 use std::sync::{Arc, Mutex, PoisonError};
 
 use rusqlite::{Connection, Row, Transaction, params};
 
 use super::HistoryError;
+use super::columns::{ChannelColumns, StepRange, channel_columns};
 use super::file::open_for_reading;
-use super::runs::{QUARTER_US, RunState, Sums, micros, portion, quarter_start};
+use super::runs::{QUARTER_US, RunState, micros, portion};
 use crate::detection::time::Utc;
 use crate::detection::verdict::{Reason, Reasons};
 
 /// Connections kept open between questions.
 const IDLE_CONNECTIONS_MAX: usize = 4;
 
-/// Quarters, times channels, that one question may ask for: eight weeks of 500 channels (some
-/// 150 MB). More is refused, so that no question can exhaust the node's memory.
-const QUARTERS_MAX: i64 = 500 * 8 * 7 * 96;
+/// Columns, times channels, that one question may ask for: eight weeks of 500 channels by quarters
+/// (some 150 MB). More is refused, so that no question can exhaust the node's memory.
+const COLUMNS_MAX: i64 = 500 * 8 * 7 * 96;
 
 /// A stretch of one channel's past.
 #[derive(Clone, Debug, PartialEq)]
@@ -67,26 +67,6 @@ pub struct RunList {
     pub runs: Vec<RunRow>,
     /// There was more than the limit; the list ends where its last run ends.
     pub truncated: bool,
-}
-
-/// One channel's sums over a quarter of an hour, or over the part of it that was asked for.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub struct QuarterRow {
-    /// Begin.
-    pub start: Utc,
-    /// End (half-open).
-    pub end: Utc,
-    /// What the time was; the four states add up to `end - start`.
-    pub sums: Sums,
-}
-
-/// One channel's quarters over a range, without holes or overlaps.
-#[derive(Clone, Debug, PartialEq, Eq)]
-pub struct ChannelQuarters {
-    /// Name of the channel.
-    pub channel: String,
-    /// By rising time.
-    pub quarters: Vec<QuarterRow>,
 }
 
 /// Answers questions about the past; cheap to clone, one clone for each who asks.
@@ -165,42 +145,71 @@ impl Reader {
         Ok(RunList { runs, truncated })
     }
 
-    /// Sums by quarter of an hour from `from` to the earlier of `to` and `now`, for the named
-    /// channels in that order, or for all on the record by name.
+    /// Sums by steps of `step_us` (us) from `from` to the earlier of `to` and `now`, for the named
+    /// channels in that order, or for all on the record by name. Steps begin at multiples of
+    /// themselves in UTC.
     ///
-    /// The four states of each quarter add up to its length; time that is not on the record is
-    /// unknown. A quarter that the range or `now` cuts is summed from its runs, not in proportion.
-    /// Edges are taken in whole microseconds, rounded down.
+    /// The four states of each column add up to its length; time that is not on the record is
+    /// unknown. A column that the range or `now` cuts, or that is shorter than a quarter of an
+    /// hour, is summed from its runs, not in proportion. Edges are taken in whole microseconds,
+    /// rounded down.
     ///
     /// # Errors
     /// When the file cannot be read, or more is asked for than one answer may hold.
-    pub fn quarters(
+    ///
+    /// # Panics
+    /// If the step neither divides a quarter of an hour nor is a multiple of it.
+    pub fn columns(
         &self,
         channels: Option<&[String]>,
         from: Utc,
         to: Utc,
         now: Utc,
-    ) -> Result<Vec<ChannelQuarters>, HistoryError> {
-        let (from_us, to_us) = (micros(from), micros(to.min(now)));
-        let count = if from_us < to_us {
-            (quarter_start(to_us - 1) - quarter_start(from_us)) / QUARTER_US + 1
-        } else {
-            0
-        };
+        step_us: i64,
+    ) -> Result<Vec<ChannelColumns>, HistoryError> {
+        assert!(step_us > 0, "a step must have a length");
+        assert!(QUARTER_US % step_us == 0 || step_us % QUARTER_US == 0, "{step_us} us: no step");
+        let range = StepRange { from_us: micros(from), to_us: micros(to.min(now)), step_us };
         let names = match channels {
             Some(names) => names.to_vec(),
             None => self.ask(names)?,
         };
-        let asked = count.saturating_mul(names.len() as i64);
-        if asked > QUARTERS_MAX {
-            return Err(HistoryError::TooMuch { asked, most: QUARTERS_MAX });
+        let asked = range.count().saturating_mul(names.len() as i64);
+        if asked > COLUMNS_MAX {
+            return Err(HistoryError::TooMuch { asked, most: COLUMNS_MAX });
         }
         self.ask(|snapshot| {
             names
                 .iter()
                 .map(|name| {
-                    let quarters = channel_quarters(snapshot, name, from_us, to_us)?;
-                    Ok(ChannelQuarters { channel: name.clone(), quarters })
+                    let columns = channel_columns(snapshot, name, range)?;
+                    Ok(ChannelColumns { channel: name.clone(), columns })
+                })
+                .collect()
+        })
+    }
+
+    /// The end of the last detection on record within each of the given channels, `(centre,
+    /// bandwidth)` (Hz), under whatever name and plan it was made; `None` where there is none.
+    ///
+    /// # Errors
+    /// When the file cannot be read.
+    pub fn last_detections(
+        &self,
+        channels: &[(f64, f64)],
+    ) -> Result<Vec<Option<Utc>>, HistoryError> {
+        self.ask(|snapshot| {
+            let mut query = snapshot.prepare_cached(
+                "SELECT max((SELECT end_us FROM run WHERE channel = channel.id AND state = ?3 \
+                 ORDER BY start_us DESC LIMIT 1)) FROM channel \
+                 WHERE abs(centre_hz - ?1) * 2 < bandwidth_hz + ?2",
+            )?;
+            channels
+                .iter()
+                .map(|(centre_hz, bandwidth_hz)| {
+                    let asked = params![centre_hz, bandwidth_hz, RunState::Occupied as i64];
+                    let end_us: Option<i64> = query.query_row(asked, |row| row.get(0))?;
+                    Ok(end_us.map(|us| Utc(us * 1_000)))
                 })
                 .collect()
         })
@@ -274,7 +283,7 @@ fn names(snapshot: &Transaction<'_>) -> rusqlite::Result<Vec<String>> {
 }
 
 /// The identities that a name has had, by time. Their records never overlap.
-fn identities(snapshot: &Transaction<'_>, name: &str) -> rusqlite::Result<Vec<i64>> {
+pub(super) fn identities(snapshot: &Transaction<'_>, name: &str) -> rusqlite::Result<Vec<i64>> {
     let mut query = snapshot
         .prepare_cached("SELECT id FROM channel WHERE name = ?1 ORDER BY valid_from_us, id")?;
     query.query_map([name], |row| row.get(0))?.collect()
@@ -282,7 +291,7 @@ fn identities(snapshot: &Transaction<'_>, name: &str) -> rusqlite::Result<Vec<i6
 
 /// Hands on the runs of one identity that overlap a range, clipped to it, for as long as `take`
 /// says that it wants more.
-fn overlapping(
+pub(super) fn overlapping(
     snapshot: &Transaction<'_>,
     id: i64,
     from_us: i64,
@@ -321,67 +330,4 @@ fn clipped(row: &Row<'_>, from_us: i64, to_us: i64) -> rusqlite::Result<RunRow> 
         level_ref: row.get(6)?,
         observed_us: until(clipped_end_us) - until(clipped_start_us),
     })
-}
-
-/// One channel's quarters: whole ones from the rollups, cut ones from the runs.
-fn channel_quarters(
-    snapshot: &Transaction<'_>,
-    name: &str,
-    from_us: i64,
-    to_us: i64,
-) -> rusqlite::Result<Vec<QuarterRow>> {
-    if from_us >= to_us {
-        return Ok(Vec::new());
-    }
-    let ids = identities(snapshot, name)?;
-    let mut rollups: HashMap<i64, Sums> = HashMap::new();
-    for &id in &ids {
-        add_rollups(snapshot, id, from_us, to_us, &mut rollups)?;
-    }
-    let mut quarters = Vec::new();
-    let mut quarter_us = quarter_start(from_us);
-    while quarter_us < to_us {
-        let next_us = quarter_us + QUARTER_US;
-        let (start_us, end_us) = (quarter_us.max(from_us), next_us.min(to_us));
-        let mut sums = Sums::default();
-        if (start_us, end_us) == (quarter_us, next_us) {
-            sums = rollups.get(&quarter_us).copied().unwrap_or_default();
-        } else {
-            for &id in &ids {
-                overlapping(snapshot, id, start_us, end_us, |run| {
-                    sums.add(run.state, micros(run.end) - micros(run.start), run.observed_us);
-                    true
-                })?;
-            }
-        }
-        // Whatever is not on the record is unknown.
-        sums.unknown_us += (end_us - start_us - sums.represented_us()).max(0);
-        quarters.push(QuarterRow { start: Utc(start_us * 1_000), end: Utc(end_us * 1_000), sums });
-        quarter_us = next_us;
-    }
-    Ok(quarters)
-}
-
-/// Adds one identity's rollups of the quarters that lie in a range.
-fn add_rollups(
-    snapshot: &Transaction<'_>,
-    id: i64,
-    from_us: i64,
-    to_us: i64,
-    rollups: &mut HashMap<i64, Sums>,
-) -> rusqlite::Result<()> {
-    let mut query = snapshot.prepare_cached(
-        "SELECT start_us, occupied_us, idle_us, unknown_us, own_us, observed_us FROM quarter \
-         WHERE channel = ?1 AND start_us >= ?2 AND start_us < ?3",
-    )?;
-    let mut rows = query.query(params![id, from_us, to_us])?;
-    while let Some(row) = rows.next()? {
-        let sums = rollups.entry(row.get(0)?).or_default();
-        sums.occupied_us += row.get::<_, i64>(1)?;
-        sums.idle_us += row.get::<_, i64>(2)?;
-        sums.unknown_us += row.get::<_, i64>(3)?;
-        sums.own_us += row.get::<_, i64>(4)?;
-        sums.observed_us += row.get::<_, i64>(5)?;
-    }
-    Ok(())
 }

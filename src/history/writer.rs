@@ -144,6 +144,8 @@ impl Task {
     fn commit(&mut self) {
         let changed = self.keeper.recorded_until_us() > self.recorded_until_us;
         if !changed && self.keeper.pending().next().is_none() {
+            // Reports may still have come, all of them from before the record's end.
+            self.health.update(false, |health| count(health, &self.keeper));
             return;
         }
         let limit = self.file_bytes_max.load(Ordering::Relaxed);
@@ -166,36 +168,39 @@ impl Task {
         self.recorded_until_us = self.keeper.recorded_until_us();
         let recorded_until = self.recorded_until_us.map(|us| Utc(us * 1_000));
         let file_bytes = self.recorder.file.bytes();
-        self.health.update(true, |health| {
+        let resumed = self.health.update(true, |health| {
             health.commits += 1;
             health.recorded_until = recorded_until;
             health.file_bytes = file_bytes;
             count(health, &self.keeper);
-            if health.state == HistoryState::Stopped {
-                health.state = HistoryState::Writing;
+            let stopped = health.state == HistoryState::Stopped;
+            stopped.then(|| {
                 let message = format!(
                     "history {}: is written again after {} failed commits; {} runs were lost",
                     self.path.display(),
                     health.failed_commits,
                     health.dropped_runs
                 );
-                tracing::info!("{message}");
-                health.message = Some(message);
-            }
+                health.state = HistoryState::Writing;
+                health.message = Some(message.clone());
+                message
+            })
         });
+        if let Some(message) = resumed {
+            tracing::info!("{message}");
+        }
     }
 
     fn failed(&self, error: &HistoryError) {
-        self.health.update(false, |health| {
+        let before = self.health.update(false, |health| {
             health.failed_commits += 1;
             count(health, &self.keeper);
-            let message = error.to_string();
-            if health.state == HistoryState::Writing {
-                tracing::error!("{message}");
-            }
-            health.state = HistoryState::Stopped;
-            health.message = Some(message);
+            health.message = Some(error.to_string());
+            std::mem::replace(&mut health.state, HistoryState::Stopped)
         });
+        if before == HistoryState::Writing {
+            tracing::error!("{error}");
+        }
     }
 }
 

@@ -182,10 +182,12 @@ async fn health_answers_with_figures_and_plain_sentences() {
     let mut expected = json!({
         "status": "well", "now": "2026-03-01T06:00:05.250Z", "problems": [],
         "capture": {"state": "running", "samples": 1_200_000, "lost_samples": 0, "gaps": 0,
-                    "blocks_dropped": 0, "last_sample_age_s": 0.012},
+                    "blocks_dropped": 0, "late": 0, "clock_steps": 0,
+                    "last_sample_age_s": 0.012},
         "detection": {"dwells": 10, "last_dwell_age_s": 0.25},
         "history": {"state": "writing", "path_name": "history.sqlite3", "last_commit_age_s": null,
-                    "failed_commits": 0, "bytes": 4096},
+                    "failed_commits": 0, "dropped_reports": 0, "dropped_runs": 0,
+                    "clipped_reports": 0, "bytes": 4096},
     });
     assert_eq!(get_json(&service(), "/v1/health").await, expected);
 

@@ -118,6 +118,33 @@ async fn occupancy_comes_by_quarter_hour_and_ends_now() {
 }
 
 #[tokio::test]
+async fn occupancy_comes_by_any_step_that_is_offered() {
+    let folder = TempDir::new().unwrap();
+    let service = serve_history(folder.path(), morning(), 40 * MINUTE_MS);
+    for (resolution, resolution_s, starts) in
+        [("1m", 60, 35), ("5m", 300, 7), ("15m", 900, 3), ("1h", 3600, 1)]
+    {
+        let uri =
+            format!("/v1/occupancy?channel=S01&resolution={resolution}&from=2026-03-01T06:05:30Z");
+        let answer = get_json(&service, &uri).await;
+        assert_eq!(answer["resolution_s"], json!(resolution_s));
+        assert_eq!(answer["start"][0], json!("2026-03-01T06:05:30.000Z"));
+        assert_eq!(answer["start"].as_array().unwrap().len(), starts, "{resolution}");
+        assert_eq!(
+            answer["channels"][0]["total"],
+            json!({"occupied_s": 270.0, "idle_s": 300.0, "unknown_s": 1200.0, "own_s": 300.0,
+                   "observed_s": 990.0, "elapsed_s": 2070.0, "occupancy": 0.473684,
+                   "unknown_share": 0.57971}),
+            "{resolution}"
+        );
+    }
+    let uri = "/v1/occupancy?channel=S01&resolution=5m&from=2026-03-01T06:00:00Z";
+    let answer = get_json(&service, uri).await;
+    let channel = &answer["channels"][0];
+    assert_eq!(channel["occupied_s"], json!([0.0, 300.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0]));
+}
+
+#[tokio::test]
 async fn the_sums_add_up_whatever_the_edges_and_a_channel_without_record_is_unknown() {
     let folder = TempDir::new().unwrap();
     // A hundred dwells of 33.333 s that begin at an odd nanosecond, of every kind, every fifth one
@@ -224,10 +251,16 @@ async fn a_range_that_cannot_be_answered_says_what_could_be() {
             "/v1/occupancy?from=2026-01-01T00:00:00Z",
             "bad_value",
             "from",
-            "from: \"2026-01-01T00:00:00.000Z\" was given; allowed: at most 31 days at once for 5 \
-             channels, so not before 2026-01-29T06:40:00.000Z.",
+            "from: \"2026-01-01T00:00:00.000Z\" was given; allowed: at most 744 h at once for 5 \
+             channels by 15m, so not before 2026-01-29T06:40:00.000Z.",
         ),
-        ("/v1/occupancy?resolution=1h", "bad_value", "resolution", ""),
+        (
+            "/v1/occupancy?resolution=2m",
+            "bad_value",
+            "resolution",
+            "resolution: \"2m\" was given; allowed: 1m, 5m, 15m, 1h.",
+        ),
+        ("/v1/occupancy?resolution=1m&from=2026-02-28T06:39:59.999Z", "bad_value", "from", ""),
         ("/v1/occupancy?channel=S99", "bad_value", "channel", ""),
         ("/v1/occupancy?bogus=", "unknown_key", "bogus", ""),
         (
@@ -257,7 +290,10 @@ async fn a_range_that_cannot_be_answered_says_what_could_be() {
             assert_eq!(problem["detail"], json!(detail), "{uri}");
         }
     }
-    // Exactly 31 days are answered.
+    // Exactly the longest ranges are answered.
+    let day = "/v1/occupancy?resolution=1m&channel=S01&from=2026-02-28T06:40:00Z";
+    let day = get_json(&service, day).await;
+    assert_eq!(day["start"].as_array().unwrap().len(), 1440);
     let month = get_json(&service, "/v1/occupancy?channel=S01&from=2026-01-29T06:40:00Z").await;
     assert_adds_up(&month, 31.0 * 86_400.0);
 }

@@ -141,6 +141,35 @@ fn a_restart_goes_on_with_the_history_and_the_time_down_is_unknown() {
 }
 
 #[test]
+fn the_hold_off_outlives_a_restart() {
+    let folder = with_carrier();
+    let node = folder.start();
+    node.wait_for("the carrier", "/v1/channels/C5", |channel| channel["verdict"] == "occupied");
+    let (status, log, _) = node.terminate();
+    assert_eq!(status.code(), Some(0), "{log}");
+    let reader = Reader::open(&folder.database()).expect("a history");
+    let detected = reader.last_detections(&[(448.102e6, 3e3)]).expect("readable")[0];
+
+    // The same site a moment later, and nobody is on the air.
+    let folder = folder.with_noise("ci16_le", 30.0);
+    let node = folder.start();
+    let channel =
+        node.wait_for("an idle C5", "/v1/channels/C5", |channel| channel["verdict"] == "idle");
+    let told: jiff::Timestamp = text(&channel, "last_detection").parse().expect("a moment");
+    assert_eq!(Some(told.as_millisecond()), detected.map(|utc| utc.0 / 1_000_000), "{channel}");
+    let offered = |answer: &Value, id: &str| {
+        let offers = answer["offers"].as_array().expect("a list");
+        offers.iter().any(|offer| offer["channel"] == id)
+    };
+    let answer = node.wait_for("C4 on offer", "/v1/availability", |answer| offered(answer, "C4"));
+    // C5 has been idle for as long as C4 has.
+    assert!(!offered(&answer, "C5"), "{answer}");
+    let refusals = answer["refusals"].as_array().expect("a list");
+    let refusal = refusals.iter().find(|refusal| refusal["channel"] == "C5").expect("refused");
+    assert_eq!(refusal["reasons"], serde_json::json!(["hold_off"]));
+}
+
+#[test]
 fn a_kill_loses_at_most_what_came_after_the_last_commit() {
     let folder = Folder::new(NODE).with_noise("ci16_le", 60.0);
     let started = now();
@@ -202,7 +231,7 @@ fn lost_samples_are_a_problem_of_the_node_while_they_are_fresh() {
     ]);
     folder.record("site", "ci16_le", &noise(48_000.0, 30.0), 48_000.0, captures);
     let node = folder.start();
-    let lost = |health: &Value| health["problems"].to_string().contains("Samples were lost");
+    let lost = |health: &Value| health["problems"].to_string().contains("a gap in the samples");
     let health = node.wait_for("the loss", "/v1/health", lost);
     assert_eq!(health["status"], "impaired");
     assert!(health["capture"]["gaps"].as_u64().expect("told") >= 1, "{health}");

@@ -340,6 +340,7 @@ fn a_full_queue_refuses_counts_and_leaves_the_time_unknown() {
     assert!(refused > 0, "a queue of two took everything");
     let health = history.writer.close();
     assert_eq!(health.dropped_reports, refused);
+    assert!(health.last_drop_age.is_some());
     for (start_ms, end_ms, state) in runs_ms(&history.reader, "L00", 0, count * 10) {
         for n in start_ms / 10..end_ms / 10 {
             let expected = if taken[n as usize] { RunState::Idle } else { RunState::Unknown };
