@@ -191,7 +191,13 @@ pub(super) fn drawing(which: Curve, numbers: &Numbers, worth: &Worth, points: &[
     };
     let both = points[0].second.is_some();
     if both {
-        let path = axes.path(points.iter().filter_map(|p| Some((p.x_db, p.second?))));
+        let path = axes.path(
+            points
+                .iter()
+                .filter_map(|p| Some((p.x_db, p.second?)))
+                // It ends where it leaves the field.
+                .filter(|(_, second)| axes.decades.is_none_or(|d| second.log10() >= -d)),
+        );
         line(&mut svg, format_args!("<path class=\"second\" d=\"{path}\"/>"));
     }
     let path = axes.path(points.iter().map(|p| (p.x_db, p.probability)));
@@ -312,18 +318,9 @@ fn working_point(svg: &mut String, which: Curve, numbers: &Numbers, worth: &Wort
     line(svg, format_args!("<path class=\"works\" d=\"M{left} {y:.1}H{x:.1}V{bottom}\"/>"));
     line(svg, format_args!("<circle class=\"dot\" cx=\"{x:.1}\" cy=\"{y:.1}\" r=\"5.5\"/>"));
     let told = told.replace('-', "\u{2212}");
-    // A rising curve leaves room on its left, a falling one on its right, unless the edge is near.
-    let (x, y, anchor) = match which {
-        Curve::Pd => (x - 12.0, y - 9.0, "end"),
-        Curve::Pfa if x > 540.0 => (x - 12.0, y + 22.0, "end"),
-        Curve::Pfa => (x + 12.0, y - 6.0, "start"),
-    };
-    line(
-        svg,
-        format_args!(
-            "<text class=\"told\" text-anchor=\"{anchor}\" x=\"{x:.1}\" y=\"{y:.1}\">{told}</text>"
-        ),
-    );
+    // Above the hairline at its left end, where neither curve comes near.
+    let (x, y) = (left + 10.0, y - 8.0);
+    line(svg, format_args!("<text class=\"told\" x=\"{x}\" y=\"{y:.1}\">{told}</text>"));
 }
 
 /// What the two lines are, in the band between the facts and the field.

@@ -10,7 +10,7 @@ use clap::{Args, ValueEnum};
 use serde::Serialize;
 
 use super::check::rounded;
-use super::designed::in_words;
+use super::designed::{beside_floor, in_words};
 use super::{Failure, curve, print};
 use crate::config::idle_offer_share;
 use crate::config::quantity::{
@@ -330,7 +330,7 @@ fn worth(
     revisit_s: f64,
 ) -> Worth {
     // A dwell made of whole looks must not lose one to rounding.
-    let looks = (dwell_s * arguments.bandwidth).max(1.0);
+    let looks = ((dwell_s * arguments.bandwidth * 1e6).round() / 1e6).max(1.0);
     let threshold_db = decibels(detector.threshold(looks));
     let sensitivity_db = decibels(detector.required_snr(looks));
     let nanos = |seconds: f64| (seconds * NANOS_PER_SECOND as f64) as i64;
@@ -369,8 +369,9 @@ fn no_dwell(numbers: &Numbers) -> String {
     let over_db = numbers.protection_over_floor_db.unwrap_or(f64::NEG_INFINITY);
     match numbers.snr_wall_db {
         Some(wall_db) if over_db <= wall_db => format!(
-            "no dwell is long enough: the protection level is {over_db:.1} dB over the floor, the \
-             SNR wall at {wall_db:.1} dB"
+            "no dwell is long enough: the protection level lies {}, the SNR wall {}",
+            beside_floor(over_db),
+            beside_floor(wall_db)
         ),
         _ => format!("no dwell of up to {LOOKS_MAX:e} independent looks is long enough"),
     }

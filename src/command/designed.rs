@@ -39,7 +39,9 @@ pub(super) fn in_words(numbers: &Numbers, notes: &[String]) -> String {
             }
         },
     );
-    line("", String::new());
+    if numbers.looks_needed.is_some() || numbers.dwell.is_some() {
+        line("", String::new());
+    }
     if let Some(looks) = numbers.looks_needed {
         let dwell = format_duration(rounded(numbers.dwell_needed_s.expect("looks take time")));
         line("needed", format!("{looks} independent looks, a dwell of {dwell}"));
@@ -112,7 +114,7 @@ fn worth_in_words(numbers: &Numbers, worth: &Worth, line: &mut impl FnMut(&str, 
 }
 
 /// `3.0 dB below the floor`.
-fn beside_floor(over_db: f64) -> String {
+pub(super) fn beside_floor(over_db: f64) -> String {
     let side = if over_db < 0.0 { "below" } else { "over" };
     format!("{:.1} dB {side} the floor", over_db.abs())
 }
