@@ -16,6 +16,8 @@
 //!   clock.
 //! - [`history`] keeps runs and rollups in SQLite.
 //! - [`answers`] serves them, and the newest verdicts from memory, over HTTP.
+//! - [`proof`] is pure: what an energy detector is worth, by closed forms and by trials of the real
+//!   one.
 //! - [`config`] turns a TOML file into checked values.
 //! - [`command`] is the command line; [`daemon`] is the one place that joins the rooms.
 //!
@@ -30,4 +32,5 @@ pub mod config;
 pub mod daemon;
 pub mod detection;
 pub mod history;
+pub mod proof;
 pub mod scene;

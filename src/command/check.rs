@@ -174,7 +174,7 @@ fn levels_in_words(band: &BandNumbers, level_ref: &str, line: &mut impl FnMut(&s
 }
 
 /// Microseconds suffice for people.
-fn rounded(seconds: f64) -> f64 {
+pub(super) fn rounded(seconds: f64) -> f64 {
     (seconds * 1e6).round() / 1e6
 }
 
@@ -187,7 +187,7 @@ fn size(bytes: f64) -> String {
 }
 
 /// A number to about two digits: `1.8`, `162`, `0.002`.
-fn two_digits(value: f64) -> String {
+pub(super) fn two_digits(value: f64) -> String {
     if value >= 9.95 || value <= 0.0 {
         return format!("{value:.0}");
     }

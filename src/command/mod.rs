@@ -3,8 +3,11 @@
 //! Standard output carries what was asked for, standard error everything else. A fault is one line.
 
 mod check;
+mod curve;
 mod demo;
 mod derived;
+mod design;
+mod designed;
 mod lines;
 mod replay;
 mod run;
@@ -50,6 +53,8 @@ enum Command {
     Replay(replay::ReplayArguments),
     /// Check a configuration and print the numbers that follow from it.
     Check(check::CheckArguments),
+    /// Work out a detector before there is one: averages, dwell, threshold, sensitivity, curves.
+    Design(Box<design::DesignArguments>),
 }
 
 #[derive(Args)]
@@ -139,6 +144,7 @@ fn dispatch() -> Result<(), Failure> {
         Command::Demo(arguments) => demo::demo(&arguments),
         Command::Replay(arguments) => replay::replay(&arguments),
         Command::Check(arguments) => check::check(&arguments),
+        Command::Design(arguments) => design::design(&arguments),
     }
 }
 

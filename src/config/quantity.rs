@@ -18,6 +18,8 @@ pub enum Quantity {
     SampleRate,
     /// A power level (dB), with what it refers to.
     Level,
+    /// A ratio of powers (dB): a noise figure, an uncertainty.
+    Ratio,
     /// A duration (s).
     Duration,
     /// A share or a probability (a plain number); written plain or in per cent.
@@ -40,6 +42,7 @@ impl Quantity {
             Quantity::Frequency => "a frequency",
             Quantity::SampleRate => "a sample rate",
             Quantity::Level => "a level",
+            Quantity::Ratio => "a ratio",
             Quantity::Duration => "a duration",
             Quantity::Share => "a share",
         }
@@ -51,6 +54,7 @@ impl Quantity {
             Quantity::Frequency => "a number and Hz, kHz, MHz or GHz",
             Quantity::SampleRate => "a number and S/s, kS/s, MS/s, Hz, kHz, MHz or GHz",
             Quantity::Level => "a number and dBFS or dBm",
+            Quantity::Ratio => "a number and dB",
             Quantity::Duration => "a number and us, ms, s, min, h or d",
             Quantity::Share => "a number, or a number and %",
         }
@@ -73,6 +77,7 @@ impl Quantity {
                 ("GHz", Ten(9)),
             ],
             Quantity::Level => &[("dBFS", Ten(0)), ("dBm", Ten(0))],
+            Quantity::Ratio => &[("dB", Ten(0))],
             Quantity::Duration => &[
                 ("us", Ten(-6)),
                 ("ms", Ten(-3)),
@@ -134,6 +139,7 @@ impl Quantity {
             Quantity::Frequency => format_frequency(value),
             Quantity::SampleRate => format_sample_rate(value),
             Quantity::Level => format_level(value, LevelRef::Dbfs),
+            Quantity::Ratio => format!("{} dB", rounded(value, 2)),
             Quantity::Duration => format_duration(value),
             Quantity::Share => format_share(value),
         }
