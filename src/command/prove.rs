@@ -15,12 +15,11 @@ use std::time::{Duration, Instant};
 use clap::Args;
 use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
 
-use super::check::two_digits;
 use super::design::level;
 use super::proved::{self, Facts, Part, Row};
 use super::{Failure, print};
 use crate::config::Configuration;
-use crate::config::quantity::{Quantity, format_duration, format_share, parse_duration};
+use crate::config::quantity::{Quantity, format_duration, parse_duration};
 use crate::daemon::open_source;
 use crate::detection::plan::{LevelRef, Plan};
 use crate::detection::time::Utc;
@@ -125,7 +124,7 @@ pub(super) fn prove(arguments: &ProveArguments) -> Result<Outcome, Failure> {
     let begun = Instant::now();
     let bar = progress_bar(arguments);
     for (number, part) in Part::ALL.into_iter().enumerate() {
-        let trial = trial(arguments, &plan, &facts, part, number as u64);
+        let trial = trial(arguments, &plan, &stated, &facts, part, number as u64);
         let share = if part == Part::Noise { 1 } else { SIGNAL_RUN_SHARE };
         let budget = match arguments.dwells {
             Some(dwells) => Budget::Dwells((dwells / share).max(1)),
@@ -217,20 +216,25 @@ fn floor_db(plan: &Plan, facts: &Facts, channel: usize) -> f64 {
     decibels(facts.noise_power * share)
 }
 
-fn trial(arguments: &ProveArguments, plan: &Plan, facts: &Facts, part: Part, number: u64) -> Trial {
+fn trial(
+    arguments: &ProveArguments,
+    plan: &Plan,
+    stated: &[Option<Stated>],
+    facts: &Facts,
+    part: Part,
+    number: u64,
+) -> Trial {
     let channels = 0..plan.channels.len();
     let signals = |kind, share, power_db: &dyn Fn(usize) -> Option<f64>| Signals {
         kind,
         share,
         powers: channels.clone().map(|channel| power_db(channel).map(linear)).collect(),
     };
-    // Stated once more, by channel: cheap beside the trials, and the same for the same seed.
-    let known = stated(plan, arguments.seed);
     let at_sensitivity = |channel: usize| {
-        known[channel].map(|known| floor_db(plan, facts, channel) + known.sensitivity_db)
+        stated[channel].map(|known| floor_db(plan, facts, channel) + known.sensitivity_db)
     };
     let at_protection = |channel: usize| {
-        known[channel].map(|_| plan.band_of(&plan.channels[channel]).protection_level_db)
+        stated[channel].map(|_| plan.band_of(&plan.channels[channel]).protection_level_db)
     };
     let loud = |channel: usize| Some(floor_db(plan, facts, channel) + OCCUPIED_OVER_FLOOR_DB);
     let signals = match part {
