@@ -11,7 +11,7 @@ use fallowband::detection::window::Window;
 use fallowband::proof::format::NumberFormat;
 use fallowband::proof::radiometer::{decibels, linear};
 use fallowband::proof::tally::{Outcome, Tally, judge_pd, judge_pfa};
-use fallowband::proof::trial::{BATCH_STEPS, Kind, Signals, Trial, run_batch};
+use fallowband::proof::trial::{Kind, Signals, Trial, run_batch};
 use num_complex::Complex32;
 use rand_core::SeedableRng;
 use rand_distr::{Distribution, StandardUniform};
@@ -20,7 +20,7 @@ use serde_json::Value;
 
 mod support;
 
-/// Dwells of 20 ms on 18 channels of 3 kHz at 96 kS/s; Pfa 1 % so that few dwells tell.
+/// Dwells of 20 ms on 12 channels of 3 kHz at 96 kS/s; Pfa 1 % so that few dwells tell.
 const NODE: &str = r#"
 [node]
 site = "Lower Saltmarsh (invented)"
@@ -34,9 +34,9 @@ protection_level = "-60dBFS"
 pfa = "1%"
 dwell = "20ms"
 [bands.raster]
-first_centre = "448.066MHz"
+first_centre = "448.078MHz"
 spacing = "4kHz"
-count = 18
+count = 12
 bandwidth = "3kHz"
 id_prefix = "C"
 "#;
@@ -59,23 +59,28 @@ fn number(value: &Value, key: &str) -> f64 {
 }
 
 #[test]
-fn a_detector_that_holds_its_rates_passes_whatever_the_number_of_threads() {
-    let one = run(NODE, "--dwells 1200 --seed 3 --threads 1 --json");
-    let four = run(NODE, "--dwells 1200 --seed 3 --threads 4 --json");
-    println!("{}", String::from_utf8_lossy(&one.stdout));
-    assert_eq!(one.stdout, four.stdout);
-    assert_eq!((one.status.code(), four.status.code()), (Some(0), Some(0)));
-    let answer = json(&one);
-    assert_eq!(answer["outcome"], "pass");
+fn counts_do_not_depend_on_the_number_of_threads_but_on_the_seed() {
+    let one = run(NODE, "--dwells 600 --seed 3 --threads 1 --json");
+    let three = run(NODE, "--dwells 600 --seed 3 --threads 3 --json");
+    assert_eq!(one.stdout, three.stdout);
+    let other = json(&run(NODE, "--dwells 600 --seed 4 --json"));
+    assert_ne!(other["results"], json(&one)["results"], "another seed draws other samples");
+}
+
+#[test]
+fn a_detector_that_holds_its_rates_passes() {
+    let output = run(NODE, "--dwells 4800 --seed 3 --json");
+    let answer = json(&output);
+    println!("{answer:#}");
+    // Signals that fill a channel lose some 0.2 dB at its edges: a run of 4000 signals gave a rate
+    // of 0.855, where 0.84 is the least. 1200 signals give it a sigma of 0.010.
+    assert_eq!((output.status.code(), answer["outcome"].as_str()), (Some(0), Some("pass")));
     let results = answer["results"].as_array().expect("rows");
     assert_eq!(results.len(), 5);
-    // Every dwell of noise decides every channel; 2 of 18 hold a signal in the others, but none
-    // twice in a row.
-    assert_eq!(
-        (number(&results[0], "decisions"), number(&results[0], "dwells")),
-        (21_600.0, 1200.0)
-    );
-    assert_eq!((number(&results[1], "decisions"), number(&results[1], "dwells")), (600.0, 300.0));
+    // Every dwell of noise decides every channel; 1 of 12 holds a signal in the others.
+    let counts = |row: &Value| (number(row, "decisions"), number(row, "dwells"));
+    assert_eq!(counts(&results[0]), (57_600.0, 4800.0));
+    assert_eq!(counts(&results[1]), (1200.0, 1200.0));
     for row in results {
         let (low, high) = (number(row, "low"), number(row, "high"));
         assert!(low <= number(row, "independent_low") + 1e-9, "{row}");
@@ -83,9 +88,6 @@ fn a_detector_that_holds_its_rates_passes_whatever_the_number_of_threads() {
         assert!(number(row, "design_effect") >= 1.0, "{row}");
         assert!((low..=high).contains(&number(row, "measured")), "{row}");
     }
-    let other = json(&run(NODE, "--dwells 64 --seed 4 --json"));
-    let same = json(&run(NODE, "--dwells 64 --seed 3 --json"));
-    assert_ne!(other["results"], same["results"], "another seed draws other samples");
 }
 
 #[test]
@@ -98,24 +100,33 @@ fn few_trials_decide_nothing() {
 }
 
 #[test]
-fn signals_on_half_of_the_channels_do_not_become_false_alarms_of_the_others() {
+fn signals_on_a_fifth_of_the_channels_do_not_become_false_alarms_of_the_others() {
     let answer = json(&run(NODE, "--dwells 300 --occupied 20% --json"));
     let noise = &answer["results"][0];
-    // Channels that hold a signal in the step or beside it are left out: of 18 with 4 on at a time,
-    // at most 14 and at least 6 are left.
+    // Channels that hold a signal in the step or beside it are left out: of 12 with 2 on at a time,
+    // at most 8 and at least 6 are left between the first step and the last.
     let decisions = number(noise, "decisions");
-    assert!((300.0 * 6.0..300.0 * 14.0).contains(&decisions), "{noise}");
+    assert!((300.0 * 6.0..300.0 * 8.1).contains(&decisions), "{noise}");
     assert!(number(noise, "low") <= 0.01 && number(noise, "high") >= 0.005, "{noise}");
 }
 
 #[test]
-fn a_format_too_coarse_for_its_noise_fails() {
-    // Noise of an eighth of a step rms: nearly all samples are zero, the rest are impulses.
-    let noise_db = decibels(2.0 * (0.125_f64 / 128.0).powi(2) * 3.0 / 96.0);
-    let output = run(NODE, &format!("--dwells 300 --format ci8 --floor {noise_db:.2}dBFS --json"));
-    let answer = json(&output);
-    assert_eq!(answer["outcome"], "fail", "{answer:#}");
-    assert_eq!(output.status.code(), Some(1));
+fn a_format_too_coarse_for_its_noise_fails_or_decides_nothing() {
+    let with_rms = |steps: f64| {
+        let floor_db = decibels(2.0 * (steps / 128.0).powi(2) * 3.0 / 96.0);
+        run(NODE, &format!("--dwells 600 --format ci8 --floor {floor_db:.2}dBFS"))
+    };
+    // Noise of 0.3 steps rms: rounding makes more noise than there was, and signals drown in it.
+    let output = with_rms(0.3);
+    let text = String::from_utf8(output.stdout).expect("UTF-8");
+    assert_eq!(output.status.code(), Some(1), "{text}");
+    assert!(text.contains("\nFAIL: "), "{text}");
+    // Of an eighth of a step: samples are zero, and the detector says that it cannot tell.
+    let output = with_rms(0.125);
+    let text = String::from_utf8(output.stdout).expect("UTF-8");
+    assert_eq!(output.status.code(), Some(2), "{text}");
+    assert!(text.contains("\nNOT DECIDED: no trial came to a decision"), "{text}");
+    assert!(text.contains("7200 verdicts had no floor"), "{text}");
 }
 
 #[test]
@@ -190,9 +201,14 @@ fn outcomes_follow_the_interval() {
     assert_eq!(judge_pfa(&of(600, 1000), 1e-3), Outcome::Fail);
     assert_eq!(judge_pfa(&of(3, 3), 1e-3), Outcome::NotDecided);
     assert_eq!(judge_pfa(&Tally::default(), 1e-3), Outcome::NotDecided);
-    assert_eq!(judge_pd(&of(900, 1), 0.85), Outcome::Pass);
-    assert_eq!(judge_pd(&of(860, 1), 0.85), Outcome::NotDecided);
-    assert_eq!(judge_pd(&of(800, 1), 0.85), Outcome::Fail);
+    assert_eq!(judge_pd(&of(900, 1), 0.9, 0.85), Outcome::Pass);
+    assert_eq!(judge_pd(&of(860, 1), 0.9, 0.85), Outcome::Pass);
+    assert_eq!(judge_pd(&of(840, 1), 0.9, 0.85), Outcome::NotDecided);
+    assert_eq!(judge_pd(&of(800, 1), 0.9, 0.85), Outcome::Fail);
+    let mut few = Tally::default();
+    few.add(9, 10);
+    assert_eq!(judge_pd(&few, 0.9, 0.85), Outcome::NotDecided);
+    assert_eq!(judge_pd(&Tally::default(), 0.9, 0.85), Outcome::NotDecided);
 }
 
 #[test]
@@ -243,7 +259,7 @@ fn signals_are_where_they_should_be_with_the_power_they_should_have() {
         };
         let (mut sum, mut count) = (0.0, 0.0);
         let mut before = Vec::new();
-        let steps = run_batch(&trial, 0, BATCH_STEPS, |report| {
+        let steps = run_batch(&trial, 0, 16, |report| {
             let on: Vec<usize> = report
                 .verdicts
                 .iter()
@@ -259,12 +275,12 @@ fn signals_are_where_they_should_be_with_the_power_they_should_have() {
             }
             before = on;
         });
-        assert_eq!(steps.len() as u64, BATCH_STEPS);
+        assert_eq!(steps.len(), 16);
         for step in &steps {
             assert_eq!((step.occupied[0].decided, step.occupied[0].detected), (2, 2));
         }
-        // 32 channel energies of some 300 looks each, at 100 + 1 times the noise: a sigma of 1 % for
-        // noise-like signals; their edges lose up to 0.2 dB, 5 %.
+        // 32 channel energies of some 300 looks each, at 100 + 1 times the noise: a sigma of 1 %
+        // for noise-like signals; their edges lose up to 0.2 dB, 5 %.
         let over = sum / count / 101.0;
         assert!((0.91..1.05).contains(&over), "{kind:?}: {over}");
     }

@@ -40,9 +40,10 @@ struct Arguments {
 }
 
 const EXIT_CODES: &str = "\
-Exit codes: 0 done, 1 a proof that fails, 2 a proof that is not decided, 64 wrong arguments, 65 a recording that cannot be used, 69 an address that
-cannot be served on, 70 a fault of the program, 73 a file or database that cannot be written, 78 a
-configuration that is wrong. Every fault is one line on standard error.
+Exit codes: 0 done, 1 a proof that fails, 2 a proof that is not decided, 64 wrong arguments, 65 a
+recording that cannot be used, 69 an address that cannot be served on, 70 a fault of the program, 73
+a file or database that cannot be written, 78 a configuration that is wrong. Every fault is one line
+on standard error.
 
 A measurement is no licence to transmit, and a receiver cannot hear a hidden node.";
 

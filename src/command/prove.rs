@@ -28,7 +28,7 @@ use crate::proof::radiometer::{decibels, linear};
 use crate::proof::stated::{Stated, default_floor_db, stated};
 use crate::proof::tally::{Outcome, Tally, judge_pd, judge_pfa};
 use crate::proof::trial::{
-    BATCH_STEPS, Kind, STEP_SAMPLES_MAX, Signals, Step, Trial, run_batch, step_samples,
+    Kind, STEP_SAMPLES_MAX, Signals, Step, Trial, batch_steps, run_batch, step_samples,
 };
 
 /// Share of the channels that have a signal at a time where detection is tried.
@@ -64,8 +64,8 @@ pub(super) struct ProveArguments {
     /// of a 16-bit format or three of an 8-bit one, lower where the protection level asks for it.
     #[arg(long, value_name = "LEVEL", value_parser = level, allow_hyphen_values = true)]
     floor: Option<(f64, LevelRef)>,
-    /// Share of the channels that are occupied, 20 dB over the floor, while false alarms are counted
-    /// on the others.
+    /// Share of the channels that are occupied, 20 dB over the floor, while false alarms are
+    /// counted on the others.
     #[arg(long, value_name = "SHARE", value_parser = occupied, default_value = "0")]
     occupied: f64,
     /// Threads; all cores unless given. Counts do not depend on it.
@@ -189,8 +189,8 @@ fn facts(
     // A full scale of four times the rms of a component: clipping would spoil every dwell.
     if noise_power / 2.0 > 1.0 / 16.0 {
         let line = format!(
-            "--floor: {floor_db:.1} {} leaves noise no room: over the whole sample rate it is {:.1} \
-             dBFS, and may be -9 dBFS",
+            "--floor: {floor_db:.1} {} leaves noise no room: over the whole sample rate it is \
+             {:.1} dBFS, and may be -9 dBFS",
             plan.level_ref.as_str(),
             decibels(noise_power)
         );
@@ -263,14 +263,15 @@ struct Shown {
 /// Runs batches on all threads until the budget is spent; by band.
 fn run(trial: &Trial, part: Part, budget: Budget, threads: usize, bar: &ProgressBar) -> Vec<Shown> {
     let begun = Instant::now();
+    let whole = batch_steps(&trial.plan);
     let next = AtomicU64::new(0);
     let claim = || {
         let batch = next.fetch_add(1, Ordering::Relaxed);
         let steps = match budget {
             // The first is always made: nothing is told of no trial at all.
             Budget::Time(time) if batch > 0 && begun.elapsed() >= time => 0,
-            Budget::Time(_) => BATCH_STEPS,
-            Budget::Dwells(dwells) => dwells.saturating_sub(batch * BATCH_STEPS).min(BATCH_STEPS),
+            Budget::Time(_) => whole,
+            Budget::Dwells(dwells) => dwells.saturating_sub(batch * whole).min(whole),
         };
         (steps > 0).then_some((batch, steps))
     };
@@ -359,7 +360,7 @@ fn judged(
             outcome: match part {
                 Part::Noise => Some(judge_pfa(&shown.tally, band.pfa)),
                 Part::Sensitivity(_) => {
-                    least.map(|least| judge_pd(&shown.tally, least.min(band.pd)))
+                    least.map(|least| judge_pd(&shown.tally, band.pd, least.min(band.pd)))
                 }
                 Part::Protection(_) => None,
             },

@@ -167,8 +167,13 @@ pub(super) fn in_words(facts: &Facts, rows: &[Row], outcome: Outcome, took_s: f6
     match outcome {
         Outcome::Pass => line(format!("PASS: {wanted}")),
         Outcome::Fail => line(format!("FAIL: not {wanted}")),
+        Outcome::NotDecided if rows.iter().any(|row| row.tally.trials == 0) => {
+            line("NOT DECIDED: no trial came to a decision where one was wanted".to_owned());
+        }
         Outcome::NotDecided => {
-            line(format!("NOT DECIDED: too few trials to tell ({wanted}); give more --seconds"));
+            line(format!(
+                "NOT DECIDED: too few trials to tell ({wanted}); give more --seconds or --dwells"
+            ));
         }
     }
     text

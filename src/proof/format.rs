@@ -1,7 +1,7 @@
 //! The number formats that receivers deliver, as a rounding of samples.
 //!
-//! What comes out is what a recording of that format holds: the negative end of an integer format is
-//! -1, and a sample with a component at either end counts as clipped.
+//! What comes out is what a recording of that format holds: the negative end of an integer format
+//! is -1, and a sample with a component at either end counts as clipped. Nothing else is changed.
 
 use num_complex::Complex32;
 

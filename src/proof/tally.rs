@@ -125,14 +125,14 @@ pub fn judge_pfa(tally: &Tally, asked: f64) -> Outcome {
     }
 }
 
-/// Judges a detection rate against the least that is good enough: by the whole interval.
-pub fn judge_pd(tally: &Tally, least: f64) -> Outcome {
+/// Judges a detection rate against the one `required` and the `least` that is good enough: it fails
+/// when the whole interval lies below `least`; it passes when the rate does not, and the interval
+/// reaches no further down from it than `required` lies above `least`.
+pub fn judge_pd(tally: &Tally, required: f64, least: f64) -> Outcome {
     let (low, high) = tally.interval();
-    if high < least {
-        Outcome::Fail
-    } else if low < least {
-        Outcome::NotDecided
-    } else {
-        Outcome::Pass
+    match tally.rate() {
+        _ if high < least => Outcome::Fail,
+        Some(rate) if rate >= least && rate - low <= required - least => Outcome::Pass,
+        _ => Outcome::NotDecided,
     }
 }

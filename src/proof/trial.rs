@@ -22,9 +22,6 @@ use crate::detection::time::{NANOS_PER_SECOND, Stamp, Utc};
 use crate::detection::timing::Timing;
 use crate::detection::verdict::{DwellReport, Reason, Reasons, State, Verdict};
 
-/// Steps in a batch: enough that making the detector costs little beside them.
-pub const BATCH_STEPS: u64 = 16;
-
 /// Most samples in a step: what a thread holds is a few times this.
 pub const STEP_SAMPLES_MAX: usize = 1 << 24;
 
@@ -90,6 +87,12 @@ pub struct Step {
 pub fn step_samples(plan: &Plan) -> usize {
     let dwells = plan.bands.iter().map(|band| Timing::new(plan, band).dwell_samples());
     dwells.max().expect("a plan has bands")
+}
+
+/// Steps in a whole batch: some millions of samples, so that making the detector costs little
+/// beside them, and few enough to keep several threads busy.
+pub fn batch_steps(plan: &Plan) -> u64 {
+    ((1 << 23) / step_samples(plan)).clamp(16, 256) as u64
 }
 
 /// Runs one batch of `steps` steps; `sink` gets every report of a whole dwell.
@@ -219,8 +222,8 @@ impl<'a> Stream<'a> {
         StandardUniform.sample(&mut self.rng)
     }
 
-    /// Appends the samples up to one flank before the end of a new step; tells the channels that are
-    /// on in it.
+    /// Appends the samples up to one flank before the end of a new step; tells the channels that
+    /// are on in it.
     fn step(&mut self, samples: &mut Vec<Complex32>) -> Vec<bool> {
         let on = self.draw();
         self.add_signals(&on);
