@@ -64,18 +64,21 @@ impl Tally {
     /// The interval of the rate: the exact one for as many independent decisions as these are worth
     /// by their spread. 0 to 1 without a decision.
     ///
-    /// Source: Korn & Graubard, Survey Methodology 24, 1998 (from memory); hits that are no whole
-    /// number are rounded outwards.
+    /// Source: Korn & Graubard, Survey Methodology 24, 1998 (from memory); what is no whole
+    /// number is rounded outwards.
     pub fn interval(&self) -> (f64, f64) {
         let effect = self.design_effect();
-        let trials = (self.trials as f64 / effect).floor() as u64;
-        if trials == 0 {
+        let (hits, trials) = (self.hits as f64 / effect, self.trials as f64 / effect);
+        // What is a whole number but for rounding stays that one.
+        let below = |value: f64| (value + 1e-9).floor() as u64;
+        let above = |value: f64| (value - 1e-9).ceil() as u64;
+        if below(trials) == 0 {
             return (0.0, 1.0);
         }
-        let hits = self.hits as f64 / effect;
-        let bound =
-            |hits: f64| interval::clopper_pearson((hits as u64).min(trials), trials, CONFIDENCE);
-        (bound(hits.floor()).0, bound(hits.ceil()).1)
+        let bound = |hits: u64, trials: u64| {
+            interval::clopper_pearson(hits.min(trials), trials, CONFIDENCE)
+        };
+        (bound(below(hits), above(trials)).0, bound(above(hits), below(trials)).1)
     }
 
     /// The exact interval as if all decisions were independent.
