@@ -212,7 +212,8 @@ pub(super) fn drawing(which: Curve, numbers: &Numbers, worth: &Worth, points: &[
     line(
         &mut svg,
         format_args!(
-            "<text class=\"title\" transform=\"translate(26 {middle}) rotate(-90)\">{title_y}</text>"
+            "<text class=\"title\" transform=\"translate(26 {middle}) rotate(-90)\">{title_y}\
+             </text>"
         ),
     );
     svg.push_str("</svg>\n");
@@ -258,8 +259,9 @@ text { font: 13px 'Source Sans 3', 'Helvetica Neue', Arial, sans-serif; fill: #2
         numbers.pd
     );
     format!(
-        "<svg xmlns=\"http://www.w3.org/2000/svg\" viewBox=\"0 0 {WIDTH} {HEIGHT}\" width=\"{WIDTH}\" \
-         height=\"{HEIGHT}\" role=\"img\" aria-label=\"{title}\">\n<style>\n{style}\n</style>\n\
+        "<svg xmlns=\"http://www.w3.org/2000/svg\" viewBox=\"0 0 {WIDTH} {HEIGHT}\" \
+         width=\"{WIDTH}\" height=\"{HEIGHT}\" role=\"img\" aria-label=\"{title}\">\n\
+         <style>\n{style}\n</style>\n\
          <rect width=\"{WIDTH}\" height=\"{HEIGHT}\" fill=\"#fbfaf5\"/>\n\
          <text class=\"head\" x=\"86\" y=\"42\">{title}</text>\n\
          <text class=\"under\" x=\"86\" y=\"66\">{facts}</text>\n"

@@ -43,7 +43,8 @@ pub(super) struct DesignArguments {
     #[arg(required_unless_present = "dwell")]
     protection_level: Option<(f64, LevelRef)>,
     /// Dwell length instead, such as 200ms; tells the sensitivity that it gives.
-    #[arg(long, value_name = "DURATION", value_parser = quantity(Quantity::Duration, 1e-6..=86_400.0))]
+    #[arg(long, value_name = "DURATION")]
+    #[arg(value_parser = quantity(Quantity::Duration, 1e-6..=86_400.0))]
     dwell: Option<f64>,
     /// False-alarm probability of one decision.
     #[arg(long, value_name = "SHARE", value_parser = quantity(Quantity::Share, 1e-9..=0.5))]
@@ -78,11 +79,13 @@ pub(super) struct DesignArguments {
     #[arg(default_value = "0s")]
     settling: f64,
     /// No offer of a channel for this long after a detection.
-    #[arg(long, value_name = "DURATION", value_parser = quantity(Quantity::Duration, 0.0..=86_400.0))]
+    #[arg(long, value_name = "DURATION")]
+    #[arg(value_parser = quantity(Quantity::Duration, 0.0..=86_400.0))]
     #[arg(default_value = "60s")]
     hold_off: f64,
     /// A channel must have been idle for this long before it is offered.
-    #[arg(long, value_name = "DURATION", value_parser = quantity(Quantity::Duration, 0.0..=86_400.0))]
+    #[arg(long, value_name = "DURATION")]
+    #[arg(value_parser = quantity(Quantity::Duration, 0.0..=86_400.0))]
     #[arg(default_value = "2s")]
     check_time: f64,
     /// Print a curve as rows (CSV) instead: Pd against SNR, or Pfa against the threshold.

@@ -9,6 +9,8 @@ mod derived;
 mod design;
 mod designed;
 mod lines;
+mod prove;
+mod proved;
 mod replay;
 mod run;
 mod summary;
@@ -26,6 +28,7 @@ use crate::config::ConfigError;
 use crate::config::quantity;
 use crate::daemon::StartError;
 use crate::detection::time::Utc;
+use crate::proof::tally::Outcome;
 
 /// Watches a block of spectrum and tells which of its channels a secondary radio may use now, for
 /// how long that holds, and how they were occupied before.
@@ -37,11 +40,16 @@ struct Arguments {
 }
 
 const EXIT_CODES: &str = "\
-Exit codes: 0 done, 64 wrong arguments, 65 a recording that cannot be used, 69 an address that
-cannot be served on, 70 a fault of the program, 73 a file or database that cannot be written, 78 a
-configuration that is wrong. Every fault is one line on standard error.
+Exit codes: 0 done, 1 a proof that fails, 2 a proof that is not decided, 64 wrong arguments, 65 a
+recording that cannot be used, 69 an address that cannot be served on, 70 a fault of the program, 73
+a file or database that cannot be written, 78 a configuration that is wrong. Every fault is one line
+on standard error.
 
 A measurement is no licence to transmit, and a receiver cannot hear a hidden node.";
+
+const DONE: u8 = 0;
+const PROOF_FAILED: u8 = 1;
+const PROOF_NOT_DECIDED: u8 = 2;
 
 #[derive(Subcommand)]
 enum Command {
@@ -55,6 +63,8 @@ enum Command {
     Check(check::CheckArguments),
     /// Work out a detector before there is one: averages, dwell, threshold, sensitivity, curves.
     Design(Box<design::DesignArguments>),
+    /// Try a configuration's detector on noise and signals: does it hold its error rates?
+    Prove(prove::ProveArguments),
 }
 
 #[derive(Args)]
@@ -120,7 +130,7 @@ pub fn main() -> ExitCode {
     let outcome = std::panic::catch_unwind(dispatch)
         .unwrap_or_else(|_| Err(Failure::new(Failure::INTERNAL, "a fault of the program itself")));
     match outcome {
-        Ok(()) => ExitCode::SUCCESS,
+        Ok(code) => ExitCode::from(code),
         Err(failure) => {
             let line = failure.line.replace(char::is_control, " ");
             // With standard error gone, the exit code still tells.
@@ -130,22 +140,30 @@ pub fn main() -> ExitCode {
     }
 }
 
-fn dispatch() -> Result<(), Failure> {
+fn dispatch() -> Result<u8, Failure> {
     let arguments = match Arguments::try_parse() {
         Ok(arguments) => arguments,
         Err(error) if error.use_stderr() => {
             return Err(Failure::new(Failure::USAGE, usage_line(&error)));
         }
         // Asked-for help and version are no fault.
-        Err(asked) => return print(&asked.render().to_string()),
+        Err(asked) => return print(&asked.render().to_string()).map(|()| DONE),
     };
-    match arguments.command {
+    let done = match arguments.command {
         Command::Run(argument) => run::run(&argument.config),
         Command::Demo(arguments) => demo::demo(&arguments),
         Command::Replay(arguments) => replay::replay(&arguments),
         Command::Check(arguments) => check::check(&arguments),
         Command::Design(arguments) => design::design(&arguments),
-    }
+        Command::Prove(arguments) => {
+            return prove::prove(&arguments).map(|outcome| match outcome {
+                Outcome::Pass => DONE,
+                Outcome::Fail => PROOF_FAILED,
+                Outcome::NotDecided => PROOF_NOT_DECIDED,
+            });
+        }
+    };
+    done.map(|()| DONE)
 }
 
 /// What is wrong with the arguments, in one line.

@@ -4,4 +4,8 @@
 //! Pure, as `detection` is, which is all that it uses: no clock, no file, no thread. The same seed
 //! gives the same trials. Nothing here decides anything about a real band.
 
+pub mod format;
 pub mod radiometer;
+pub mod stated;
+pub mod tally;
+pub mod trial;

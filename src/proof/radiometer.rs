@@ -1,8 +1,8 @@
 //! The arithmetic of an energy detector before there is one: noise, threshold, sensitivity, the
 //! averages that a level takes, and the wall below which no averaging helps.
 //!
-//! Levels of noise and signal are powers in the channel. It must never promise what only a perfectly
-//! known floor could hold: an uncertainty of the floor enters on both sides.
+//! Levels of noise and signal are powers in the channel. It must never promise what only a
+//! perfectly known floor could hold: an uncertainty of the floor enters on both sides.
 
 use crate::detection::statistics::energy;
 use crate::detection::statistics::quadratic::GammaSum;

@@ -11,14 +11,14 @@ fn run(arguments: &[&str]) -> Outcome {
 #[test]
 fn help_goes_to_standard_output_and_lists_commands_and_exit_codes() {
     let text = run(&["--help"]).good();
-    for word in ["run ", "demo ", "replay ", "check "] {
+    for word in ["run ", "demo ", "replay ", "check ", "design ", "prove "] {
         assert!(text.lines().any(|line| line.trim_start().starts_with(word)), "{word}: {text}");
     }
-    for code in ["0 done", "64 ", "65 ", "69 ", "70 ", "73 ", "78"] {
+    for code in ["0 done", "1 a proof", "2 a proof", "64 ", "65 ", "69 ", "70 ", "73 ", "78"] {
         assert!(text.replace('\n', " ").contains(code), "{code}: {text}");
     }
     assert!(text.contains("A measurement is no licence to transmit"));
-    for command in ["run", "demo", "replay", "check"] {
+    for command in ["run", "demo", "replay", "check", "design", "prove"] {
         let text = run(&[command, "--help"]).good();
         assert!(text.contains(&format!("Usage: fallowband {command}")), "{text}");
     }
@@ -33,7 +33,7 @@ fn the_version_is_that_of_the_package() {
 #[test]
 fn wrong_arguments_are_told_in_one_line_that_names_them() {
     let cases: [(&[&str], &[&str]); 12] = [
-        (&[], &["no command given", "run, demo, replay, check"]),
+        (&[], &["no command given", "run, demo, replay, check, design, prove"]),
         (&["chek"], &["'chek'", "'check'"]),
         (&["check"], &["--config <FILE>"]),
         (&["run", "node.toml"], &["'node.toml'"]),
