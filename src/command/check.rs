@@ -5,14 +5,13 @@ use std::path::PathBuf;
 use clap::Args;
 
 use super::derived::{BandNumbers, Derived, TRANSMISSIONS_PER_HOUR};
-use super::{Failure, print};
+use super::{Failure, plan_of, print};
 use crate::config::quantity::{
     format_duration, format_frequency, format_sample_rate, format_share,
 };
 use crate::config::{Configuration, Source};
-use crate::daemon::{DATABASE_NAME, open_source};
+use crate::daemon::DATABASE_NAME;
 use crate::detection::burst::BURST_SHARE;
-use crate::detection::time::Utc;
 
 #[derive(Args)]
 pub(super) struct CheckArguments {
@@ -26,15 +25,7 @@ pub(super) struct CheckArguments {
 
 pub(super) fn check(arguments: &CheckArguments) -> Result<(), Failure> {
     let configuration = Configuration::load(&arguments.config)?;
-    // What the source really delivers decides; the configuration of a replay has none.
-    let (centre_hz, sample_rate_hz) = match configuration.source {
-        Some(_) => {
-            let source = open_source(&configuration, Utc(0), 0)?;
-            (Some(source.centre_hz()), Some(source.sample_rate_hz()))
-        }
-        None => (None, None),
-    };
-    let plan = configuration.plan(centre_hz, sample_rate_hz)?;
+    let plan = plan_of(&configuration)?;
     let derived = Derived::new(&plan);
     let warnings = configuration.warnings(&plan);
     let text = if arguments.json {

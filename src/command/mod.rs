@@ -24,9 +24,10 @@ use clap::error::ErrorKind;
 use clap::{Args, CommandFactory, Parser, Subcommand};
 
 use crate::capture::CaptureError;
-use crate::config::ConfigError;
 use crate::config::quantity;
-use crate::daemon::StartError;
+use crate::config::{ConfigError, Configuration};
+use crate::daemon::{StartError, open_source};
+use crate::detection::plan::Plan;
 use crate::detection::time::Utc;
 use crate::proof::tally::Outcome;
 
@@ -200,6 +201,19 @@ fn print(text: &str) -> Result<(), Failure> {
 fn note(text: impl fmt::Display) {
     // Nobody reads it: then there is nobody to tell.
     drop(writeln!(io::stderr(), "fallowband: note: {text}"));
+}
+
+/// The plan of a configuration on what its source really delivers; the configuration of a replay
+/// has no source, and its own values decide.
+fn plan_of(configuration: &Configuration) -> Result<Plan, Failure> {
+    let (centre_hz, sample_rate_hz) = match configuration.source {
+        Some(_) => {
+            let source = open_source(configuration, Utc(0), 0)?;
+            (Some(source.centre_hz()), Some(source.sample_rate_hz()))
+        }
+        None => (None, None),
+    };
+    Ok(configuration.plan(centre_hz, sample_rate_hz)?)
 }
 
 /// A frequency argument, such as `435.1MHz`.

@@ -17,12 +17,10 @@ use indicatif::{ProgressBar, ProgressDrawTarget, ProgressStyle};
 
 use super::design::level;
 use super::proved::{self, Facts, Part, Row};
-use super::{Failure, print};
+use super::{Failure, plan_of, print};
 use crate::config::Configuration;
 use crate::config::quantity::{Quantity, format_duration, parse_duration};
-use crate::daemon::open_source;
 use crate::detection::plan::{LevelRef, Plan};
-use crate::detection::time::Utc;
 use crate::proof::format::NumberFormat;
 use crate::proof::radiometer::{decibels, linear};
 use crate::proof::stated::{Stated, default_floor_db, stated};
@@ -146,15 +144,7 @@ pub(super) fn prove(arguments: &ProveArguments) -> Result<Outcome, Failure> {
 
 fn load(arguments: &ProveArguments) -> Result<Plan, Failure> {
     let configuration = Configuration::load(&arguments.config)?;
-    // What the source really delivers decides; the configuration of a replay has none.
-    let (centre_hz, sample_rate_hz) = match configuration.source {
-        Some(_) => {
-            let source = open_source(&configuration, Utc(0), 0)?;
-            (Some(source.centre_hz()), Some(source.sample_rate_hz()))
-        }
-        None => (None, None),
-    };
-    let plan = configuration.plan(centre_hz, sample_rate_hz)?;
+    let plan = plan_of(&configuration)?;
     let samples = step_samples(&plan);
     if samples > STEP_SAMPLES_MAX {
         let dwell_s = samples as f64 / plan.receiver.sample_rate_hz;

@@ -17,16 +17,6 @@ pub enum HistoryState {
     Stopped,
 }
 
-impl HistoryState {
-    /// The word used in every interface.
-    pub fn as_str(self) -> &'static str {
-        match self {
-            HistoryState::Writing => "writing",
-            HistoryState::Stopped => "stopped",
-        }
-    }
-}
-
 /// How the writing of history fares.
 #[derive(Clone, Debug, PartialEq, Eq)]
 pub struct HistoryHealth {
